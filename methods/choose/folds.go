@@ -1,0 +1,161 @@
+package choose
+
+import (
+	"crypto/sha256"
+	"encoding/binary"
+	"fmt"
+	"math"
+	"math/rand/v2"
+	"sort"
+
+	"batten/methods/spline"
+)
+
+// fold is one share of the rows: what is fitted without it, and its rows.
+type fold struct {
+	train spline.Data
+	rows  []int32 // held out, of Data
+}
+
+// DefaultFolds is used where a rule names neither folds nor a block.
+const DefaultFolds = 10
+
+// drawFolds shares the rows, or whole block values, among folds. The draw
+// depends on seed and group's name alone, over rows in canonical order.
+func (s *search) drawFolds() error {
+	d, k := s.d, s.rule.Folds
+	unit := make([]int32, d.N) // what each row is drawn with
+	units := d.N
+	if s.rule.Block != nil {
+		rank := map[int32]int32{}
+		var seen []int32
+		for _, row := range d.Order {
+			if b := s.rule.Block[row]; rank[b] == 0 {
+				rank[b] = 1
+				seen = append(seen, b)
+			}
+		}
+		sort.Slice(seen, func(i, j int) bool { return seen[i] < seen[j] })
+		for i, b := range seen {
+			rank[b] = int32(i)
+		}
+		for i, row := range d.Order {
+			unit[i] = rank[s.rule.Block[row]]
+		}
+		units = len(seen)
+		if k == 0 {
+			k = units
+		}
+	} else {
+		for i := range unit {
+			unit[i] = int32(i)
+		}
+		if k == 0 {
+			k = DefaultFolds
+		}
+	}
+	what := "rows"
+	if s.rule.Block != nil {
+		what = "block values"
+	}
+	if k < 2 || k > units {
+		return RangeError{fmt.Sprintf("%d folds cannot be made of %d %s", k, units, what)}
+	}
+	order := make([]int32, units)
+	for i := range order {
+		order[i] = int32(i)
+	}
+	if k < units { // with one unit a fold there is nothing to draw
+		h := sha256.Sum256(fmt.Appendf(nil, "folds\n%d\n%s\n", s.rule.Seed, s.rule.Group))
+		rng := rand.NewPCG(binary.LittleEndian.Uint64(h[:]), binary.LittleEndian.Uint64(h[8:]))
+		for i := units - 1; i > 0; i-- {
+			j := below(rng, uint64(i+1))
+			order[i], order[j] = order[j], order[i]
+		}
+	}
+	foldOfUnit := make([]int32, units)
+	for i, u := range order {
+		foldOfUnit[u] = int32(i % k)
+	}
+	s.foldOf = make([]int32, d.N)
+	for i := range s.foldOf {
+		s.foldOf[i] = foldOfUnit[unit[i]]
+	}
+	return s.makeFolds(k)
+}
+
+// below draws a number below n without bias.
+func below(rng *rand.PCG, n uint64) uint64 {
+	limit := math.MaxUint64 - math.MaxUint64%n
+	for {
+		if v := rng.Uint64(); v < limit {
+			return v % n
+		}
+	}
+}
+
+// makeFolds collapses the training rows of every fold.
+func (s *search) makeFolds(k int) error {
+	d := s.d
+	s.folds = make([]fold, k)
+	var x, y, w []float64
+	for f := range s.folds {
+		x, y, w = x[:0], y[:0], w[:0]
+		for i, of := range s.foldOf {
+			if int(of) == f {
+				s.folds[f].rows = append(s.folds[f].rows, int32(i))
+				continue
+			}
+			x, y, w = append(x, d.RowX[i]), append(y, d.RowY[i]), append(w, d.RowW[i])
+		}
+		if err := s.folds[f].train.Reset(x, y, w); err != nil {
+			return RangeError{fmt.Sprintf("without fold %d of %d too little is left: %v", f+1, k, err)}
+		}
+	}
+	return nil
+}
+
+// crossValidate returns the mean over all held-out rows of w (y - ghat)^2,
+// lambda as it is (not rescaled for the smaller training set), and the sums of
+// the folds.
+func (s *search) crossValidate(lambda float64) (score float64, sse []float64) {
+	sse = make([]float64, len(s.folds))
+	d, total := s.d, 0.0
+	var fit spline.Fit
+	for f := range s.folds {
+		s.ws.FitInto(&fit, &s.folds[f].train, lambda)
+		for _, i := range s.folds[f].rows {
+			g, _, _ := fit.At(d.RowX[i])
+			e := d.RowY[i] - g
+			sse[f] += float64(float64(d.RowW[i]*e) * e)
+		}
+		total += sse[f]
+	}
+	return total / float64(d.N), sse
+}
+
+// oneSE returns the smoothest candidate whose score lies within one standard
+// error of the best. The standard error is that of the mean of the folds' mean
+// losses: their standard deviation over the root of their number.
+// Source: Breiman, Friedman, Olshen and Stone (1984), Classification and
+// Regression Trees, section 3.4.3.
+func (s *search) oneSE(best Candidate, all []Candidate) (Candidate, bool) {
+	_, sse := s.crossValidate(best.Lambda)
+	k := float64(len(sse))
+	mean, ss := 0.0, 0.0
+	for f := range sse {
+		sse[f] /= float64(len(s.folds[f].rows))
+		mean += sse[f]
+	}
+	mean /= k
+	for _, v := range sse {
+		ss += float64((v - mean) * (v - mean))
+	}
+	limit := best.Score + math.Sqrt(ss/(k-1)/k)
+	for _, c := range all { // in order of edf: the first is the smoothest
+		if c.Score <= limit {
+			return c, true
+		}
+	}
+	return best, false
+}
