@@ -21,14 +21,14 @@ type Curve struct {
 func (c *Curve) At(x float64) (value, slope, curvature float64) {
 	m := len(c.Knots)
 	if x <= c.Knots[0] {
-		_, slope, _ = c.piece(0, c.Knots[0])
+		_, slope, _ = c.Piece(0, c.Knots[0])
 		return c.Value[0] + float64(slope*(x-c.Knots[0])), slope, 0
 	}
 	if x >= c.Knots[m-1] {
-		_, slope, _ = c.piece(m-2, c.Knots[m-1])
+		_, slope, _ = c.Piece(m-2, c.Knots[m-1])
 		return c.Value[m-1] + float64(slope*(x-c.Knots[m-1])), slope, 0
 	}
-	return c.piece(c.Interval(x), x)
+	return c.Piece(c.Interval(x), x)
 }
 
 // Interval returns j with Knots[j] <= x < Knots[j+1], held within the pieces.
@@ -40,8 +40,8 @@ func (c *Curve) Interval(x float64) int {
 	return max(0, min(j, len(c.Knots)-2))
 }
 
-// piece evaluates the cubic between knots j and j+1.
-func (c *Curve) piece(j int, x float64) (value, slope, curvature float64) {
+// Piece evaluates the cubic between knots j and j+1, also outside them.
+func (c *Curve) Piece(j int, x float64) (value, slope, curvature float64) {
 	x0, x1 := c.Knots[j], c.Knots[j+1]
 	g0, g1, c0, c1 := c.Value[j], c.Value[j+1], c.Curvature[j], c.Curvature[j+1]
 	h, u, v := x1-x0, x-x0, x1-x
