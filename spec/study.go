@@ -45,6 +45,7 @@ type Input struct {
 	Name      Name
 	File      string // a path or a glob, with forward slashes, under the study's folder
 	FileRange hcl.Range
+	Outside   bool     // the files may lie outside the study's folder, on purpose
 	Missing   []string // cells that mean "missing"; default: the empty cell
 	Separator byte     // 0: by the file's name (, or tab)
 	Decimal   byte     // '.' or ','
@@ -126,6 +127,7 @@ type Exception struct {
 	Only   *expr.Program // Bool, over the by columns, n and distinct
 	Rule   Rule
 	Reason string
+	Source string // Only as written
 }
 
 // Band says which interval stands about the curve.
