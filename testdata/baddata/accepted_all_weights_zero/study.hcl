@@ -1,0 +1,26 @@
+# Every row of group b weighs nothing.
+study { title = "accepted all weights zero" }
+
+input "rows_read" {
+  file    = "data.csv"
+  columns = {
+    g = text
+    x = number("d")
+    y = number("N")
+    w = number
+  }
+}
+
+curve "c" {
+  from     = rows_read
+  response = y
+  along    = x
+  by       = [g]
+  weight   = w
+  smoothness { rule = gcv }
+}
+
+report "page" {
+  files = ["out/page.md"]
+  show  = [c]
+}

@@ -1,0 +1,24 @@
+# x is 1e9 and a little: the little must not be lost.
+study { title = "accepted huge offset" }
+
+input "rows_read" {
+  file    = "data.csv"
+  columns = {
+    g = text
+    x = number("d")
+    y = number("N")
+  }
+}
+
+curve "c" {
+  from     = rows_read
+  response = y
+  along    = x
+  by       = [g]
+  smoothness { rule = gcv }
+}
+
+report "page" {
+  files = ["out/page.md"]
+  show  = [c]
+}

@@ -1,0 +1,24 @@
+# Two places are too few for a curve: the group is left out and said to be.
+study { title = "accepted two distinct x" }
+
+input "rows_read" {
+  file    = "data.csv"
+  columns = {
+    g = text
+    x = number("d")
+    y = number("N")
+  }
+}
+
+curve "c" {
+  from     = rows_read
+  response = y
+  along    = x
+  by       = [g]
+  smoothness { rule = gcv }
+}
+
+report "page" {
+  files = ["out/page.md"]
+  show  = [c]
+}

@@ -1,0 +1,24 @@
+# All readings of group b stand at one x: no curve, and the other group has its own.
+study { title = "accepted x all equal" }
+
+input "rows_read" {
+  file    = "data.csv"
+  columns = {
+    g = text
+    x = number("d")
+    y = number("N")
+  }
+}
+
+curve "c" {
+  from     = rows_read
+  response = y
+  along    = x
+  by       = [g]
+  smoothness { rule = gcv }
+}
+
+report "page" {
+  files = ["out/page.md"]
+  show  = [c]
+}

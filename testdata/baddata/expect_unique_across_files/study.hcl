@@ -1,0 +1,25 @@
+# The same row in two files.
+study { title = "expect unique across files" }
+
+input "rows_read" {
+  file    = "data/*.csv"
+  expect "one row a day" { unique = [g, x] }
+  columns = {
+    g = text
+    x = number("d")
+    y = number("N")
+  }
+}
+
+curve "c" {
+  from     = rows_read
+  response = y
+  along    = x
+  by       = [g]
+  smoothness { rule = gcv }
+}
+
+report "page" {
+  files = ["out/page.md"]
+  show  = [c]
+}

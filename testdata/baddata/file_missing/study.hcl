@@ -1,0 +1,24 @@
+# The file is not there.
+study { title = "file missing" }
+
+input "rows_read" {
+  file    = "readings.csv"
+  columns = {
+    g = text
+    x = number("d")
+    y = number("N")
+  }
+}
+
+curve "c" {
+  from     = rows_read
+  response = y
+  along    = x
+  by       = [g]
+  smoothness { rule = gcv }
+}
+
+report "page" {
+  files = ["out/page.md"]
+  show  = [c]
+}

@@ -1,0 +1,31 @@
+# A guard refuses a fit: nothing is written.
+study { title = "guard refuses" }
+
+input "rows_read" {
+  file    = "data.csv"
+  columns = {
+    g = text
+    x = number("d")
+    y = number("N")
+  }
+}
+
+curve "c" {
+  from     = rows_read
+  response = y
+  along    = x
+  by       = [g]
+  smoothness { rule = gcv }
+}
+
+guard "enough" {
+  on        = c
+  require   = n >= 50
+  otherwise = refuse
+  reason    = "a curve of record needs as many readings"
+}
+
+report "page" {
+  files = ["out/page.md"]
+  show  = [c]
+}

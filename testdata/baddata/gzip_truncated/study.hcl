@@ -1,0 +1,24 @@
+# The second half of the file was lost on the way.
+study { title = "gzip truncated" }
+
+input "rows_read" {
+  file    = "data.csv.gz"
+  columns = {
+    g = text
+    x = number("d")
+    y = number("N")
+  }
+}
+
+curve "c" {
+  from     = rows_read
+  response = y
+  along    = x
+  by       = [g]
+  smoothness { rule = gcv }
+}
+
+report "page" {
+  files = ["out/page.md"]
+  show  = [c]
+}
