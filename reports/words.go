@@ -1,0 +1,36 @@
+package reports
+
+// ruleWords says in plain words what each rule does.
+var ruleWords = []struct{ rule, text string }{
+	{"fixed_df", "fixed_df: the degrees of freedom were written down beforehand; lambda is what gives them. The data had no say in the smoothness."},
+	{"fixed_lambda", "fixed_lambda: lambda was written down beforehand, on the scale of x, y and the weights as they are."},
+	{"gcv", "gcv: generalised cross-validation, n RSS / (n − edf)². It stands for the error of predicting a row from the others. It may undersmooth small groups, and does so where errors are serially dependent."},
+	{"loocv", "loocv: leave-one-out cross-validation, the mean weighted squared error of predicting each row from all the others."},
+	{"kfold", "kfold: rows, or whole blocks of them, are held out in turn and predicted from the rest; the mean weighted squared error is made smallest. Blocks guard against serial dependence within them."},
+	{"reml", "reml: restricted maximum likelihood of the curve as a random function with a straight line as its fixed part. It seldom undersmooths, and has fewer false minima than cross-validation."},
+}
+
+// howToRead explains the terms of the report, and cautions.
+func howToRead(rules map[string]bool, contrasts bool) []node {
+	items := []string{
+		"A curve is a penalised smooth: of all curves it has the least weighted squared distance to the rows plus lambda times its total squared bend. Between the data it is a cubic, beyond them a straight line.",
+		"edf, the effective degrees of freedom, counts how many free numbers the curve spends: 2 is a straight line, more is wigglier. It can be compared between groups; lambda cannot.",
+		"sigma is the residual standard deviation of a row of weight 1, sqrt(RSS / (n − edf)).",
+		"The band is pointwise: at any one x it holds the curve with the stated level, averaged along the curve. It does not hold the whole curve at once.",
+		"A crossing or a peak has the interval over which the band still allows it. “Open” means that the data end before the interval does.",
+	}
+	for _, r := range ruleWords {
+		if rules[r.rule] {
+			items = append(items, "The rule "+r.text)
+		}
+	}
+	if contrasts {
+		items = append(items, "A difference of two curves adds their variances. Looking along a whole axis, or at many pairs, finds a stretch without zero by chance more often than the level says.")
+	}
+	return []node{
+		heading{2, "How to read this"}, list{items},
+		heading{3, "Caution"}, para{"A smooth curve describes the data it was given. Bands assume independent errors of the stated variance; " +
+			"they do not cover a wrong rule, a bias common to all readings, or whatever was not measured. Curves beyond the data rest on assumption alone. " +
+			"Where a decision can affect health or safety, follow the standards and local codes that apply and the judgement of licensed practice; this report does not replace them."},
+	}
+}

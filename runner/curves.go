@@ -1,0 +1,528 @@
+package runner
+
+import (
+	"context"
+	"fmt"
+	"hash/fnv"
+	"math"
+	"sort"
+	"strconv"
+	"sync/atomic"
+
+	"github.com/fxamacker/cbor/v2"
+	"golang.org/x/sync/errgroup"
+
+	"batten/runner/store"
+	"batten/runner/table"
+	"batten/spec"
+	"batten/spec/expr"
+)
+
+// partCount is the fixed number of shares that a curve's groups fall into. A
+// group's part depends on its name alone, so that a new group moves no other.
+const partCount = 256
+
+// curveFits is a curve with all its fits, in the order of the groups.
+type curveFits struct {
+	def     *spec.Curve
+	digest  string // of the manifest: names every part's object
+	count   rowCount
+	aside   []setAside
+	zero    int
+	fits    []*storedFit
+	values  [][]value // of fits[i]
+	by      []string
+	Reused  int
+	verdict []verdict // of fits[i]; set by judge
+}
+
+// manifest is what the store keeps of a curve: its parts and row counts.
+type manifest struct {
+	Parts  []string // object digests, in the order of part numbers
+	Number []int    // the parts' numbers
+	Count  rowCount
+	Aside  []setAside
+	Zero   int
+}
+
+// curveRun is what the curve stage needs.
+type curveRun struct {
+	study    *spec.Study
+	store    *store.Store
+	files    map[string][]table.File // by input
+	tables   *tables
+	workers  int
+	progress Progress
+	done     *atomic.Int64 // parts finished, over all curves
+	total    *atomic.Int64
+	read     func() // called once before rows are read
+}
+
+// fit brings one curve up to date: the whole curve from the store where
+// nothing it depends on changed, else part by part, group by group.
+func (r *curveRun) fit(ctx context.Context, c *spec.Curve) (*curveFits, error) {
+	k := curveKey(r.study, c, r.files)
+	if cf := r.recall(c, k.String()); cf != nil {
+		return cf, nil
+	}
+	f, err := r.tables.get(ctx, c.From)
+	if err != nil {
+		return nil, err
+	}
+	groups, aside, err := form(c, f, r.study)
+	if err != nil {
+		return nil, err
+	}
+	cf := &curveFits{def: c, count: f.count, aside: aside, by: byNames(c)}
+	jobs := r.plan(c, groups)
+	r.total.Add(int64(len(jobs)))
+	r.progress.Start(c.Name.Text, len(groups))
+
+	w := newWeighing(c, f)
+	var reused atomic.Int64
+	eg, ectx := errgroup.WithContext(ctx)
+	next := make(chan *job)
+	eg.Go(func() error {
+		defer close(next)
+		for _, j := range jobs {
+			select {
+			case next <- j:
+			case <-ectx.Done():
+				return ectx.Err()
+			}
+		}
+		return nil
+	})
+	for range max(1, min(r.workers, len(jobs))) {
+		eg.Go(func() error {
+			ft := &fitter{}
+			for j := range next {
+				n, err := r.part(ft, c, w, j)
+				if err != nil {
+					return err
+				}
+				reused.Add(int64(n))
+				r.done.Add(1)
+				r.progress.Add(len(j.groups))
+			}
+			return nil
+		})
+	}
+	err = eg.Wait()
+	r.progress.Stop()
+	if err != nil {
+		if ctx.Err() != nil {
+			return nil, &StoppedError{Done: int(r.done.Load()), Total: int(r.total.Load())}
+		}
+		return nil, err
+	}
+	cf.Reused = int(reused.Load())
+	m := manifest{Count: f.count, Aside: aside}
+	for _, j := range jobs {
+		m.Parts = append(m.Parts, j.digest)
+		m.Number = append(m.Number, j.number)
+		for i, g := range j.groups {
+			cf.fits = append(cf.fits, j.out.Fits[i])
+			cf.values = append(cf.values, g.values)
+			m.Zero += j.out.Fits[i].ZeroW
+		}
+	}
+	cf.zero = m.Zero
+	sort.Sort(byGroup{cf})
+	b, err := codec.Marshal(m)
+	if err != nil {
+		return nil, err
+	}
+	if cf.digest, err = r.store.Put(k.String(), b); err != nil {
+		return nil, err
+	}
+	return cf, nil
+}
+
+// recall returns a curve that the store holds whole, or nil.
+func (r *curveRun) recall(c *spec.Curve, key string) *curveFits {
+	b, dig, ok := r.store.Get(key)
+	if !ok {
+		return nil
+	}
+	cf, err := openCurve(r.store, c, dig, b)
+	if err != nil {
+		return nil
+	}
+	cf.Reused = len(cf.fits)
+	return cf
+}
+
+// openCurve reads a curve's fits by its manifest. An error means that some
+// object is missing, damaged or of another layout.
+func openCurve(st *store.Store, c *spec.Curve, dig string, b []byte) (*curveFits, error) {
+	var m manifest
+	if err := cbor.Unmarshal(b, &m); err != nil {
+		return nil, err
+	}
+	cf := &curveFits{def: c, digest: dig, count: m.Count, aside: m.Aside, zero: m.Zero, by: byNames(c)}
+	for _, p := range m.Parts {
+		obj, ok := st.Object(p)
+		if !ok {
+			return nil, fmt.Errorf("part %.12s of curve %q is no longer in the store", p, c.Name.Text)
+		}
+		var part storedPart
+		if err := cbor.Unmarshal(obj, &part); err != nil {
+			return nil, err
+		}
+		for _, f := range part.Fits {
+			vs, err := parseValues(c, f.Group)
+			if err != nil {
+				return nil, err
+			}
+			cf.fits = append(cf.fits, f)
+			cf.values = append(cf.values, vs)
+		}
+	}
+	sort.Sort(byGroup{cf})
+	return cf, nil
+}
+
+// byGroup sorts a curve's fits by group.
+type byGroup struct{ *curveFits }
+
+func (b byGroup) Len() int           { return len(b.fits) }
+func (b byGroup) Less(i, j int) bool { return compareValues(b.values[i], b.values[j]) < 0 }
+func (b byGroup) Swap(i, j int) {
+	b.fits[i], b.fits[j] = b.fits[j], b.fits[i]
+	b.values[i], b.values[j] = b.values[j], b.values[i]
+}
+
+func byNames(c *spec.Curve) []string {
+	var out []string
+	for _, b := range c.By {
+		out = append(out, b.Name.Text)
+	}
+	return out
+}
+
+// parseValues reads a group's values back from their text.
+func parseValues(c *spec.Curve, text []string) ([]value, error) {
+	if len(text) != len(c.By) {
+		return nil, fmt.Errorf("a stored group has %d values, expected %d", len(text), len(c.By))
+	}
+	out := make([]value, len(text))
+	for i, t := range text {
+		v := value{text: t, kind: c.By[i].Kind}
+		switch v.kind {
+		case expr.Number:
+			n, err := strconv.ParseFloat(t, 64)
+			if err != nil {
+				return nil, err
+			}
+			v = value{num: n, kind: v.kind}
+		case expr.Date:
+			n, ok := expr.ParseDate(t)
+			if !ok {
+				return nil, fmt.Errorf("%q is no date", t)
+			}
+			v = value{num: n, kind: v.kind}
+		}
+		out[i] = v
+	}
+	return out, nil
+}
+
+// job is one part to bring up to date.
+type job struct {
+	number int
+	groups []group
+	text   [][]string // values of groups[i] as text
+	rules  []*spec.Rule
+	except []string
+	out    *storedPart
+	digest string
+}
+
+// plan shares the groups among parts and settles which rule each follows.
+func (r *curveRun) plan(c *spec.Curve, groups []group) []*job {
+	parts := make([]*job, partCount)
+	by := byNames(c)
+	for _, g := range groups {
+		text := make([]string, len(g.values))
+		for i, v := range g.values {
+			text[i] = v.String()
+		}
+		h := fnv.New32a()
+		h.Write([]byte(label(by, text)))
+		p := int(h.Sum32() % partCount)
+		if parts[p] == nil {
+			parts[p] = &job{number: p}
+		}
+		j := parts[p]
+		j.groups = append(j.groups, g)
+		j.text = append(j.text, text)
+	}
+	var jobs []*job
+	for _, j := range parts {
+		if j != nil {
+			jobs = append(jobs, j)
+		}
+	}
+	return jobs
+}
+
+// weighing holds the columns of a curve as the fits want them.
+type weighing struct {
+	x, y, w []float64
+	block   map[string][]int32 // by block column: ranks of its sorted values
+}
+
+func newWeighing(c *spec.Curve, f *frame) *weighing {
+	w := &weighing{x: f.cols[c.Along.Name.Text].Num, y: f.cols[c.Response.Name.Text].Num, block: map[string][]int32{}}
+	if c.Weight != nil {
+		w.w = f.cols[c.Weight.Name.Text].Num
+	}
+	for _, b := range blocks(c) {
+		w.block[b.Name.Text] = ranks(f.cols[b.Name.Text])
+	}
+	return w
+}
+
+// ranks numbers a column's values in their sorted order; missing is -1.
+func ranks(c *expr.Column) []int32 {
+	seen := map[value]bool{}
+	var vals []value
+	for i := range c.Len() {
+		if !c.Missing(i) {
+			if v := valueAt(c, i); !seen[v] {
+				seen[v] = true
+				vals = append(vals, v)
+			}
+		}
+	}
+	sort.Slice(vals, func(a, b int) bool { return vals[a].compare(vals[b]) < 0 })
+	rank := make(map[value]int32, len(vals))
+	for i, v := range vals {
+		rank[v] = int32(i)
+	}
+	out := make([]int32, c.Len())
+	for i := range out {
+		out[i] = -1
+		if !c.Missing(i) {
+			out[i] = rank[valueAt(c, i)]
+		}
+	}
+	return out
+}
+
+// rerank makes ranks dense within one group, so that a value seen only
+// elsewhere changes nothing here.
+func rerank(b []int32) {
+	sorted := append([]int32(nil), b...)
+	sort.Slice(sorted, func(i, j int) bool { return sorted[i] < sorted[j] })
+	rank := map[int32]int32{}
+	for _, v := range sorted {
+		if _, ok := rank[v]; !ok {
+			rank[v] = int32(len(rank))
+		}
+	}
+	for i, v := range b {
+		b[i] = rank[v]
+	}
+}
+
+// part brings one part up to date and says how many of its fits were reused.
+func (r *curveRun) part(ft *fitter, c *spec.Curve, w *weighing, j *job) (reused int, err error) {
+	by := byNames(c)
+	keys := make([]string, len(j.groups))
+	fits := make([]*storedFit, len(j.groups))
+	pk := newKey("part", objectVersion)
+	pk.add("curve", c.Name.Text)
+	for _, b := range by {
+		pk.add("by", b)
+	}
+	for i := range j.groups {
+		f, rule, err := r.describe(ft, c, w, j, i)
+		if err != nil {
+			return 0, err
+		}
+		fits[i], keys[i] = f, f.Key
+		j.rules = append(j.rules, rule)
+		pk.add("group", label(by, j.text[i]), f.Key)
+	}
+	text := pk.String()
+	slot := "part/" + c.Name.Text + "/" + fmt.Sprint(j.number)
+	if b, dig, ok := r.store.Get(text); ok {
+		var p storedPart
+		if cbor.Unmarshal(b, &p) == nil && len(p.Fits) == len(fits) {
+			j.out, j.digest = &p, dig
+			return len(fits), nil
+		}
+	}
+	// A changed row refits its group alone: the part's last object still
+	// holds the others.
+	old := map[string]*storedFit{}
+	if dig, ok := r.store.Slot(slot); ok {
+		if b, ok := r.store.Object(dig); ok {
+			var p storedPart
+			if cbor.Unmarshal(b, &p) == nil {
+				for _, f := range p.Fits {
+					old[label(by, f.Group)+"\n"+f.Key] = f
+				}
+			}
+		}
+	}
+	for i := range fits {
+		if f := old[label(by, fits[i].Group)+"\n"+keys[i]]; f != nil {
+			fits[i] = f
+			reused++
+			continue
+		}
+		if fits[i].Failed != "" {
+			continue
+		}
+		if err := r.compute(ft, c, w, j, i, fits[i]); err != nil {
+			return reused, fmt.Errorf("%s: %w", fitName(c.Name.Text, label(by, j.text[i])), err)
+		}
+	}
+	j.out = &storedPart{Fits: fits}
+	b, err := codec.Marshal(j.out)
+	if err != nil {
+		return reused, err
+	}
+	if j.digest, err = r.store.Put(text, b); err != nil {
+		return reused, err
+	}
+	return reused, r.store.SetSlot(slot, j.digest)
+}
+
+// load puts group i's rows into the worker's memory, collapsed. A group that
+// cannot carry a curve comes back with the reason.
+func (r *curveRun) load(ft *fitter, c *spec.Curve, w *weighing, j *job, i int, rule *spec.Rule) (block []int32, err error) {
+	if rule != nil && rule.Block != nil {
+		block = w.block[rule.Block.Name.Text]
+	}
+	ft.gather(w.x, w.y, w.w, block, j.groups[i].rows)
+	err = ft.data.Reset(ft.x, ft.y, ft.weights())
+	if block != nil {
+		rerank(ft.block)
+		return ft.block, err
+	}
+	return nil, err
+}
+
+// describe settles a group's rule and key.
+func (r *curveRun) describe(ft *fitter, c *spec.Curve, w *weighing, j *job, i int) (*storedFit, *spec.Rule, error) {
+	out := &storedFit{Group: j.text[i]}
+	_, err := r.load(ft, c, w, j, i, nil)
+	why := ""
+	if err != nil {
+		var ok bool
+		if why, ok = dataCause(err); !ok {
+			return nil, nil, err
+		}
+	}
+	out.N, out.Distinct, out.ZeroW = ft.data.N, len(ft.data.X), ft.data.ZeroWeight
+	rule, exception := ruleFor(c, j.groups[i].values, out.N, out.Distinct)
+	out.Rule, out.Exception = rule.Name, exception
+	var block []int32
+	if rule.Block != nil && why == "" {
+		if block, err = r.load(ft, c, w, j, i, rule); err != nil {
+			return nil, nil, err
+		}
+	}
+	group := label(byNames(c), j.text[i])
+	out.Key = groupKey(r.study, rule, exception, group, &ft.data, block)
+	out.Failed = why
+	return out, rule, nil
+}
+
+// compute fits group i.
+func (r *curveRun) compute(ft *fitter, c *spec.Curve, w *weighing, j *job, i int, out *storedFit) error {
+	rule := j.rules[i]
+	block, err := r.load(ft, c, w, j, i, rule)
+	if err != nil {
+		return err
+	}
+	return ft.compute(r.study, rule, out, label(byNames(c), j.text[i]), block)
+}
+
+// ruleFor finds the rule that a group follows: the first exception that
+// holds, else the curve's own.
+func ruleFor(c *spec.Curve, vals []value, n, distinct int) (*spec.Rule, string) {
+	for i := range c.Exceptions {
+		e := &c.Exceptions[i]
+		t := e.Only.Eval(func(name string) *expr.Column {
+			switch name {
+			case "n":
+				return oneNumber(float64(n))
+			case "distinct":
+				return oneNumber(float64(distinct))
+			}
+			for k, b := range c.By {
+				if b.Name.Text == name {
+					return column(vals[k])
+				}
+			}
+			panic("unchecked column " + name + " in an exception")
+		}, 1)
+		if t.Truth[0] == expr.True {
+			return &e.Rule, e.Name.Text
+		}
+	}
+	return &c.Rule, ""
+}
+
+func oneNumber(v float64) *expr.Column { return &expr.Column{Kind: expr.Number, Num: []float64{v}} }
+
+// column returns one value as a column of one row.
+func column(v value) *expr.Column {
+	switch v.kind {
+	case expr.Text:
+		return &expr.Column{Kind: expr.Text, Code: []uint32{0}, Dict: []string{v.text}}
+	case expr.Bool:
+		t := expr.False
+		if v.text == "true" {
+			t = expr.True
+		}
+		return &expr.Column{Kind: expr.Bool, Truth: []uint8{t}}
+	default:
+		return &expr.Column{Kind: v.kind, Num: []float64{v.num}}
+	}
+}
+
+// gridOf returns where a fit's curve is tabulated.
+func gridOf(g *spec.Grid, lo, hi float64) ([]float64, error) {
+	if len(g.At) > 0 {
+		return g.At, nil
+	}
+	if g.From != nil {
+		lo = *g.From
+	}
+	if g.To != nil {
+		hi = *g.To
+	}
+	if hi < lo {
+		return nil, nil
+	}
+	if g.Step > 0 {
+		first, last := math.Ceil(lo/g.Step), math.Floor(hi/g.Step)
+		if last-first > maxGrid {
+			return nil, fmt.Errorf("grid step = %s makes %.0f points, at most %d are tabulated; use a wider step",
+				table.FormatNumber(g.Step), last-first+1, maxGrid)
+		}
+		var out []float64
+		for k := first; k <= last; k++ {
+			out = append(out, float64(k*g.Step))
+		}
+		return out, nil
+	}
+	out := make([]float64, g.Points)
+	for i := range out {
+		t := float64(i) / float64(max(1, g.Points-1))
+		out[i] = lo + float64((hi-lo)*t)
+	}
+	if len(out) > 1 {
+		out[len(out)-1] = hi
+	}
+	return out, nil
+}
+
+// maxGrid bounds one fit's table.
+const maxGrid = 1_000_000

@@ -1,0 +1,211 @@
+package runner
+
+import (
+	"context"
+	"math"
+	"path/filepath"
+	"slices"
+	"strings"
+
+	"golang.org/x/sync/errgroup"
+
+	"batten/runner/ledger"
+	"batten/spec"
+)
+
+// Move is one fit that differs from the ledger.
+type Move struct {
+	Fit    string   `json:"fit"`
+	What   []string `json:"what"`            // "new", "gone", "shifted", "edf changed", "rule changed"
+	Shift  *float64 `json:"shift,omitempty"` // largest |new - old|, in half-widths of the old band
+	At     *float64 `json:"at,omitempty"`    // where
+	AtText string   `json:"at_text,omitempty"`
+	OldEDF *float64 `json:"old_edf,omitempty"`
+	NewEDF *float64 `json:"new_edf,omitempty"`
+}
+
+const (
+	// shiftTolerance is how far a curve may lie from the accepted one, in
+	// half-widths of the accepted band, before it counts as moved.
+	shiftTolerance = 0.25
+	// edfTolerance is the change of edf that counts: what two printed
+	// decimals show.
+	edfTolerance = 0.005
+)
+
+// ledgerDir is where a study's ledger lies.
+func ledgerDir(s *spec.Study) string { return filepath.Join(s.Dir, "ledger") }
+
+// entries makes the ledger's rows of a curve's standing fits.
+func entries(ctx context.Context, cf *curveFits, workers int) ([]ledger.Entry, error) {
+	out := make([]ledger.Entry, len(cf.fits))
+	err := eachFit(ctx, cf, workers, func(ft *fitter, i int) error {
+		f := cf.fits[i]
+		d, err := ft.derive(cf.def, f, cf.verdict[i], wants{readings: true})
+		if err != nil {
+			return err
+		}
+		e := ledger.Entry{
+			Group: f.Group, N: f.N, Distinct: f.Distinct, Rule: f.Rule, Exception: f.Exception,
+			Lambda: f.Lambda, EDF: f.EDF, RSS: f.RSS, Sigma: f.Sigma, GCV: f.GCV, LOOCV: f.LOOCV, REML: f.REML, Score: f.Score,
+			Flags: d.flags, From: f.Knots[0], To: f.Knots[len(f.Knots)-1], Key: f.Key[:16],
+		}
+		for _, p := range tabulate(d.fit, cf.def, places(e.From, e.To)) {
+			e.Curve = append(e.Curve, p.Value)
+			e.HalfWidth = append(e.HalfWidth, halfWidth(p))
+		}
+		seen := map[string]bool{}
+		for _, r := range d.readings {
+			name := r.def.Name.Text
+			if strings.HasSuffix(r.Kind, "_at") {
+				name += "_at"
+			}
+			if seen[name] { // of several crossings the first is the ledger's
+				continue
+			}
+			seen[name] = true
+			e.Readings = append(e.Readings, ledger.Value{Name: name, Value: r.Value, Lower: r.Lower, Upper: r.Upper})
+		}
+		out[i] = e
+		return nil
+	})
+	if err != nil {
+		return nil, err
+	}
+	standing := out[:0]
+	for i := range out {
+		if cf.verdict[i].fits() {
+			standing = append(standing, out[i])
+		}
+	}
+	return standing, nil
+}
+
+// eachFit calls do for every standing fit, in parallel.
+func eachFit(ctx context.Context, cf *curveFits, workers int, do func(*fitter, int) error) error {
+	eg, ctx := errgroup.WithContext(ctx)
+	const block = 32
+	next := make(chan int)
+	eg.Go(func() error {
+		defer close(next)
+		for i := 0; i < len(cf.fits); i += block {
+			select {
+			case next <- i:
+			case <-ctx.Done():
+				return ctx.Err()
+			}
+		}
+		return nil
+	})
+	for range max(1, workers) {
+		eg.Go(func() error {
+			ft := &fitter{}
+			for lo := range next {
+				for i := lo; i < min(lo+block, len(cf.fits)); i++ {
+					if !cf.verdict[i].fits() {
+						continue
+					}
+					if err := do(ft, i); err != nil {
+						return err
+					}
+				}
+			}
+			return nil
+		})
+	}
+	return eg.Wait()
+}
+
+// moved compares a curve's fits with the ledger's, in the order of groups;
+// fits that are gone come last.
+func moved(ctx context.Context, cf *curveFits, old *ledger.Accepted, workers int) ([]Move, error) {
+	name := cf.def.Name.Text
+	if old == nil {
+		old = &ledger.Accepted{By: cf.by}
+	}
+	before := map[string]*ledger.Entry{}
+	if slices.Equal(old.By, cf.by) {
+		for i := range old.Entries {
+			before[label(old.By, old.Entries[i].Group)] = &old.Entries[i]
+		}
+	}
+	moves := make([]*Move, len(cf.fits))
+	err := eachFit(ctx, cf, workers, func(ft *fitter, i int) error {
+		f := cf.fits[i]
+		g := label(cf.by, f.Group)
+		m := &Move{Fit: fitName(name, g)}
+		o := before[g]
+		if o == nil {
+			m.What, m.NewEDF = []string{"new"}, ptr(f.EDF)
+			moves[i] = m
+			return nil
+		}
+		if o.Key == f.Key[:16] {
+			return nil // the same rows, rule and methods: the same fit
+		}
+		fit, err := ft.open(f)
+		if err != nil {
+			return err
+		}
+		shift, where := 0.0, math.NaN()
+		for k, x := range places(o.From, o.To) {
+			if k >= len(o.Curve) {
+				break
+			}
+			v, _, _ := fit.At(x)
+			d := math.Abs(v - o.Curve[k])
+			// The ledger keeps seven digits; less than that is no movement.
+			if d <= 1e-6*math.Abs(o.Curve[k]) {
+				continue
+			}
+			if s := d / o.HalfWidth[k]; s > shift {
+				shift, where = s, x
+			}
+		}
+		if shift > shiftTolerance {
+			m.What = append(m.What, "shifted")
+		}
+		if math.Abs(f.EDF-o.EDF) >= edfTolerance {
+			m.What = append(m.What, "edf changed")
+		}
+		if f.Rule != o.Rule || f.Exception != o.Exception {
+			m.What = append(m.What, "rule changed")
+		}
+		if len(m.What) == 0 {
+			return nil
+		}
+		m.OldEDF, m.NewEDF = ptr(o.EDF), ptr(f.EDF)
+		if finite(shift) && finite(where) {
+			m.Shift, m.At = ptr(shift), ptr(where)
+			m.AtText = placeText(&cf.def.Along, where)
+		}
+		moves[i] = m
+		return nil
+	})
+	if err != nil {
+		return nil, err
+	}
+	var out []Move
+	have := map[string]bool{}
+	for i, m := range moves {
+		if cf.verdict[i].fits() {
+			have[label(cf.by, cf.fits[i].Group)] = true
+		}
+		if m != nil {
+			out = append(out, *m)
+		}
+	}
+	for _, e := range old.Entries {
+		if g := label(old.By, e.Group); !have[g] || !slices.Equal(old.By, cf.by) {
+			out = append(out, Move{Fit: fitName(name, g), What: []string{"gone"}, OldEDF: ptr(e.EDF)})
+		}
+	}
+	return out, nil
+}
+
+func ptr(v float64) *float64 {
+	if !finite(v) {
+		return nil
+	}
+	return &v
+}

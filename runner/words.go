@@ -1,0 +1,90 @@
+package runner
+
+import (
+	"fmt"
+	"math"
+	"strings"
+
+	"batten/runner/table"
+	"batten/spec"
+)
+
+// whyText tells a choice in one or two plain sentences.
+func whyText(f *storedFit) string {
+	edf := fmt.Sprintf("edf %.2f", f.EDF)
+	switch f.Rule {
+	case spec.FixedDF:
+		return fmt.Sprintf("The degrees of freedom were fixed beforehand at %s; lambda %.4g gives them.", edf, f.Lambda)
+	case spec.FixedLambda:
+		return fmt.Sprintf("Lambda was fixed beforehand at %s, which gives %s.", table.FormatNumber(f.Lambda), edf)
+	}
+	lo, hi := span(f)
+	s := fmt.Sprintf("%s was computed at %s from edf %.2f to %.2f; ", criterion(f.Rule), plural(len(f.Candidates), "candidate", "candidates"), lo, hi)
+	chosen, runner := -1, -1
+	for i, m := range f.Minima {
+		if m.Chosen {
+			chosen = i
+		} else if runner < 0 {
+			runner = i
+		}
+	}
+	switch {
+	case chosen < 0:
+		s += fmt.Sprintf("the smoothest candidate within one standard error of the best was taken, at %s.", edf)
+	case f.Minima[chosen].End == "smooth":
+		s += fmt.Sprintf("its smallest value lies at the smooth end of the search, %s: the data ask for no more than a straight line, or nearly so.", edf)
+	case f.Minima[chosen].End == "rough":
+		s += fmt.Sprintf("its smallest value lies at the rough end of the search, %s, and it would fall further beyond.", edf)
+	default:
+		s += fmt.Sprintf("its smallest value lies at %s.", edf)
+	}
+	if runner >= 0 && chosen >= 0 {
+		m := f.Minima[runner]
+		s += fmt.Sprintf(" The runner-up is a minimum at edf %.2f%s.", m.EDF, worse(f, m.Score))
+	}
+	return s
+}
+
+// worse says how far a score lies above the chosen one. REML is a log
+// likelihood: differences count, not ratios.
+func worse(f *storedFit, score float64) string {
+	if f.Rule == spec.REML {
+		return fmt.Sprintf(", %.3g worse in −2 log likelihood", score-f.Score)
+	}
+	if f.Score > 0 {
+		return fmt.Sprintf(", %.3g%% worse", 100*(score/f.Score-1))
+	}
+	return ""
+}
+
+func span(f *storedFit) (lo, hi float64) {
+	lo, hi = math.Inf(1), math.Inf(-1)
+	for _, c := range f.Candidates {
+		lo, hi = min(lo, c.EDF), max(hi, c.EDF)
+	}
+	return lo, hi
+}
+
+// flagText says in plain words what a flag means and what to do about it.
+func flagText(name string, v verdict) string {
+	switch name {
+	case "at_bound":
+		return "The criterion is smallest at an end of the searched range, so the bound and not the data set the smoothness. Look at the curve; widen or narrow df_at_least and df_at_most on purpose, or use another rule."
+	case "straight_line":
+		return "The rule chose a straight line, or nearly so: the scatter hides any bend. That is a result; more readings or less scatter would be needed to see a bend."
+	case "several_minima":
+		return "Two or more minima score within 1% of each other: the data do not settle between a smoother and a wigglier curve. Compare them before relying on detail; df_at_most or reml would settle it by rule."
+	case "autocorrelated":
+		return "Neighbouring residuals resemble each other. Either the curve is too stiff, or the errors are serially dependent; then gcv and loocv undersmooth and bands are too narrow. Consider k-fold over blocks."
+	case "high_leverage":
+		return "Some rows all but fix the curve where they stand. Check these rows: an error in one of them would go straight into the curve."
+	case "few_distinct":
+		return "There are few distinct x, so little can be said about smoothness from the data alone. Consider fixed_df with a reason."
+	case "extrapolated":
+		return "A reading or the grid lies beyond the data. The curve goes on straight there by assumption, and the band widens; nothing observed supports it."
+	}
+	if g, ok := strings.CutPrefix(name, "guard "); ok {
+		return fmt.Sprintf("The guard %q warns: its condition does not hold for this fit.", g)
+	}
+	return name
+}
