@@ -101,9 +101,8 @@ curve "sugar" {
   along    = visited                # a date as the x axis
   by       = [cultivar]
   smoothness {
-    rule   = kfold                  # no folds given: each lot is left out in turn,
-    block  = lot                    # for a lot's fruit share their sugar
-    one_se = true
+    rule  = kfold                   # no folds given: each lot is left out in turn,
+    block = lot                     # for a lot's fruit share their sugar
   }
   grid { step = 7 }
   reading "midwinter" { value_at = "2025-12-21" }

@@ -128,7 +128,7 @@ func (g group) rows(d *draw) []row {
 	var rows []row
 	for lot := range g.lots {
 		name := fmt.Sprintf("%s-%s-%d", g.code, map[string]string{"air": "A", "liner": "L", "low_oxygen": "O"}[g.store], lot+1)
-		sweet := 12.4 + float64(0.5*d.normal()) // the lot's own sugar at harvest
+		sweet := 12.4 + float64(0.2*d.normal()) // the lot's own sugar at harvest
 		early := 0
 		if lot >= 3 {
 			early = 3 // these lots are pressed on Thursdays, not on Mondays
@@ -143,7 +143,7 @@ func (g group) rows(d *draw) []row {
 			spread := 1.2 + float64(0.16*mean) // of one fruit: firm ones differ more
 			firmness := mean + float64(spread/math.Sqrt(float64(fruit))*d.normal())
 			x := float64(day) / 100
-			sugar := sweet + float64(2.1*x)/(0.4+x) - float64(0.45*float64(x*x)) + float64(0.35*d.normal())
+			sugar := sweet + float64(2.1*x)/(0.4+x) - float64(0.45*float64(x*x)) + float64(0.3*d.normal())
 			r := row{lot: name, cultivar: g.cultivar, store: g.store, picked: first.AddDate(0, 0, 2*lot), day: day,
 				fruit: strconv.Itoa(fruit), firmness: tenths(max(firmness, 1)), sugar: tenths(sugar)}
 			if g.lots > 2 {
