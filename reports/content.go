@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 	"sort"
+	"strconv"
 	"strings"
 )
 
@@ -178,6 +179,11 @@ func curveSection(c *Curve, index int, rules map[string]bool) []node {
 	return append(out, exceptions(c)...)
 }
 
+// percent writes a level as a percentage.
+func percent(level float64) string {
+	return strconv.FormatFloat(math.Round(1e6*level)/1e4, 'f', -1, 64)
+}
+
 // fileName is a curve's name as part of a file's.
 func fileName(name string, index int) string {
 	s := strings.Map(func(r rune) rune {
@@ -223,7 +229,7 @@ func definition(c *Curve) string {
 	if c.Weight != "" {
 		s += fmt.Sprintf(", rows weighted by %s", c.Weight)
 	}
-	return s + fmt.Sprintf(". Smoothness by the rule %s. The band holds %s pointwise with %s%%.", c.Rule, c.BandFor, short(100*c.Level, 4))
+	return s + fmt.Sprintf(". Smoothness by the rule %s. The band holds %s pointwise with %s%%.", c.Rule, c.BandFor, percent(c.Level))
 }
 
 func rowsText(r *RowCount) string {
@@ -253,14 +259,14 @@ func groupText(c *Curve, f *Fit) string {
 
 // overview is the table of groups; flags are numbered footnotes.
 func overview(c *Curve) grid {
-	g := grid{caption: fmt.Sprintf("%s: the fits. Intervals hold with %s%%.", c.Name, short(100*c.Level, 4))}
+	g := grid{caption: fmt.Sprintf("%s: the fits. Intervals hold with %s%%.", c.Name, percent(c.Level))}
 	g.header = append(append(g.header, c.By...), "n", "distinct", "rule", "edf", "lambda", "sigma")
 	g.right = make([]bool, len(c.By))
 	g.right = append(g.right, true, true, false, true, true, true)
+	g.header, g.right = append(g.header, "flags"), append(g.right, false)
 	for _, r := range c.Readings {
 		g.header, g.right = append(g.header, r), append(g.right, true)
 	}
-	g.header, g.right = append(g.header, "flags"), append(g.right, false)
 	number := map[string]int{}
 	for i := range c.Fits {
 		if i == maxRows {
@@ -270,12 +276,9 @@ func overview(c *Curve) grid {
 		f := &c.Fits[i]
 		rule := f.Rule
 		if f.Exception != "" {
-			rule += " *"
+			rule += "\u00a0*"
 		}
 		row := append(append([]string(nil), f.Group...), fmt.Sprint(f.N), fmt.Sprint(f.Distinct), rule, fixed(f.EDF, 2), short(f.Lambda, 4), short(f.Sigma, 4))
-		for _, name := range c.Readings {
-			row = append(row, readingCell(c, f, name))
-		}
 		var marks []string
 		for _, x := range f.Flags {
 			n, ok := number[x.Name]
@@ -286,7 +289,11 @@ func overview(c *Curve) grid {
 			}
 			marks = append(marks, fmt.Sprint(n))
 		}
-		g.rows = append(g.rows, append(row, strings.Join(marks, " ")))
+		row = append(row, strings.Join(marks, " "))
+		for _, name := range c.Readings {
+			row = append(row, readingCell(c, f, name))
+		}
+		g.rows = append(g.rows, row)
 	}
 	return g
 }
@@ -329,7 +336,12 @@ func fitBody(c *Curve, f *Fit, file string) []node {
 			if r.AtIsX && !math.IsNaN(r.At) {
 				at = " at " + place(c.X, r.At)
 			} else if r.Kind == "crossing" {
-				at = " of " + short(r.At, 5)
+				at = " of " + exact(r.At)
+			}
+			if r.Kind == "value" || r.Kind == "slope" {
+				if at = " at " + exact(r.At); c.X.Date {
+					at = " at " + isoDate(r.At)
+				}
 			}
 			g.rows = append(g.rows, []string{r.Name, strings.ReplaceAll(r.Kind, "_at", ", place") + at, v, lo, hi, unitText(r, c.X), r.Note})
 		}
@@ -399,7 +411,7 @@ func some(names []string) string {
 
 func contrastSection(c *Contrast, index int) []node {
 	out := []node{heading{2, c.Name}, para{fmt.Sprintf("The difference of the %s curves, %s less %s by %s, with a pointwise band of %s%%. "+
-		"Groups are taken as independent; the figure's axis is marked where the band excludes zero.", c.Of, c.Minus[0], c.Minus[1], c.Across, short(100*c.Level, 4))}}
+		"Groups are taken as independent; the figure's axis is marked where the band excludes zero.", c.Of, c.Minus[0], c.Minus[1], c.Across, percent(c.Level))}}
 	g := grid{caption: "Where the pointwise band excludes zero", header: []string{"group", "stretches of " + c.X.label()}, right: []bool{false, false}}
 	pics := gallery{}
 	for i := range c.Pairs {

@@ -165,7 +165,7 @@ func dots(pts []Point, y func(Point) float64, r float64) plot.Plotter {
 			path.Arc(at, rad, 0, 2*math.Pi)
 			path.Close()
 		}
-		c.SetLineStyle(draw.LineStyle{Color: faint("point", 150), Width: 0.6})
+		c.SetLineStyle(draw.LineStyle{Color: ink("point"), Width: 0.6})
 		c.Stroke(path)
 	}
 	return s
@@ -181,7 +181,7 @@ func line(xs, ys []float64, name string, width vg.Length, dashes ...vg.Length) p
 }
 
 // ribbon fills the stretch between two curves.
-func ribbon(g []GridPoint, alpha uint8) plot.Plotter {
+func ribbon(g []GridPoint, name string) plot.Plotter {
 	var ring plotter.XYs
 	for _, p := range g {
 		ring = append(ring, plotter.XY{X: p.X, Y: p.Lower})
@@ -189,7 +189,7 @@ func ribbon(g []GridPoint, alpha uint8) plot.Plotter {
 	for i := len(g) - 1; i >= 0; i-- {
 		ring = append(ring, plotter.XY{X: g[i].X, Y: g[i].Upper})
 	}
-	return &plotter.Polygon{XYs: []plotter.XYs{ring}, Color: faint("curve", alpha)}
+	return &plotter.Polygon{XYs: []plotter.XYs{ring}, Color: ink(name)}
 }
 
 // runs splits a grid into stretches within and beyond the data.
@@ -213,11 +213,11 @@ func runs(g []GridPoint) [][]GridPoint {
 func curves(p *plot.Plot, g []GridPoint, width vg.Length) {
 	for _, r := range runs(g) {
 		if finiteBand(r) {
-			alpha := uint8(44)
+			name := "band"
 			if r[0].Extrapolated {
-				alpha = 20
+				name = "beyond"
 			}
-			p.Add(ribbon(r, alpha))
+			p.Add(ribbon(r, name))
 		}
 	}
 	for _, r := range runs(g) {
@@ -259,6 +259,14 @@ var (
 	anyBlack  = regexp.MustCompile(`#000000`)
 )
 
+// room widens the axes a little, so that nothing stands on their ends.
+func room(p *plot.Plot) {
+	for _, a := range []*plot.Axis{&p.X, &p.Y} {
+		d := 0.025 * (a.Max - a.Min)
+		a.Min, a.Max = a.Min-d, a.Max+d
+	}
+}
+
 // render draws a figure to SVG. Width and height are in points.
 func render(p *plot.Plot, w, h vg.Length, title, desc string, t theme) []byte {
 	// axes that show one value need a range
@@ -269,7 +277,7 @@ func render(p *plot.Plot, w, h vg.Length, title, desc string, t theme) []byte {
 		}
 	}
 	c := vgsvg.New(w, h)
-	p.Draw(draw.New(c))
+	p.Draw(draw.Crop(draw.New(c), 0, -9, 0, -5))
 	var b bytes.Buffer
 	_, _ = c.WriteTo(&b) // a buffer takes everything
 	s := b.String()

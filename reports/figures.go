@@ -20,10 +20,11 @@ const (
 // fitFigure shows rows, curve, band and readings of one fit.
 func fitFigure(c *Curve, f *Fit, t theme) []byte {
 	p := frame(clean(c.X), clean(c.Y))
-	p.Add(dots(f.Points, func(q Point) float64 { return q.Y }, 2.4))
 	curves(p, f.Grid, 1.6)
+	p.Add(dots(f.Points, func(q Point) float64 { return q.Y }, 2.2))
+	room(p)
 	p.Add(readingMarks(c, f))
-	desc := fmt.Sprintf("%s along %s: %d rows, the fitted curve with edf %s and its %s%% band.", c.Y.Name, c.X.Name, f.N, short(f.EDF, 3), short(100*c.Level, 4))
+	desc := fmt.Sprintf("%s along %s: %d rows, the fitted curve with edf %s and its %s%% band.", c.Y.Name, c.X.Name, f.N, short(f.EDF, 3), percent(c.Level))
 	return render(p, wideW, wideH, f.Name, desc, t)
 }
 
@@ -51,8 +52,8 @@ func readingMarks(c *Curve, f *Fit) plot.Plotter {
 		inside := func(v float64) bool { u := x(v); return u >= dc.Min.X-1 && u <= dc.Max.X+1 }
 		clampX := func(v float64) vg.Length { return max(dc.Min.X, min(dc.Max.X, x(clampInf(v)))) }
 		for _, r := range f.Readings {
-			if math.IsNaN(r.Value) {
-				continue
+			if math.IsNaN(r.Value) || strings.HasPrefix(r.Note, "at the end") {
+				continue // an extreme at an end marks nothing of its own
 			}
 			name := clip(r.Name, 24)
 			switch {
@@ -175,7 +176,7 @@ func choiceFigure(f *Fit, t theme) []byte {
 	p.X.Tick.Marker = edfTicks{}
 	p.Add(nowhere(func(dc *draw.Canvas, x, y func(float64) vg.Length) {
 		for i := range cx {
-			dc.StrokeLine2(draw.LineStyle{Color: faint("point", 130), Width: 0.7}, x(cx[i]), y(cy[i])-2, x(cx[i]), y(cy[i])+2)
+			dc.StrokeLine2(draw.LineStyle{Color: ink("point"), Width: 0.7}, x(cx[i]), y(cy[i])-2, x(cx[i]), y(cy[i])+2)
 		}
 		for k, m := range e.Minima {
 			if m.Score > top || !(m.EDF > 0) {
@@ -226,7 +227,7 @@ func (edfTicks) Ticks(lo, hi float64) []plot.Tick {
 	for _, v := range []float64{2, 3, 4, 6, 8, 12, 16, 24, 32, 48, 64, 96, 128, 256, 512, 1024, 2048, 4096} {
 		u := math.Log2(v)
 		if u >= lo-0.02 && u <= hi && u-last >= (hi-lo)/7 {
-			out = append(out, plot.Tick{Value: u, Label: short(v, 4)})
+			out = append(out, plot.Tick{Value: u, Label: exact(v)})
 			last = u
 		}
 	}
@@ -241,17 +242,19 @@ func residualFigure(c *Curve, f *Fit, t theme) []byte {
 	y := clean(c.Y)
 	y.Name = "residual"
 	p := frame(clean(c.X), y)
-	p.Add(dots(f.Points, func(q Point) float64 { return q.Residual }, 2))
+	p.Add(dots(f.Points, func(q Point) float64 { return q.Residual }, 1.8))
 	p.Add(line([]float64{p.X.Min, p.X.Max}, []float64{0, 0}, "curve", 0.9))
+	room(p)
 	return render(p, smallW, smallH, "Residuals of "+f.Name, fmt.Sprintf("Residuals of %d rows against %s, with the zero line.", f.N, c.X.Name), t)
 }
 
 // tinyFigure is one of the small multiples, on shared scales.
 func tinyFigure(c *Curve, f *Fit, lo, hi [2]float64, t theme) []byte {
 	p := frame(Axis{Date: c.X.Date}, Axis{})
-	p.Add(dots(f.Points, func(q Point) float64 { return q.Y }, 1.1))
 	curves(p, f.Grid, 1.2)
+	p.Add(dots(f.Points, func(q Point) float64 { return q.Y }, 1))
 	p.X.Min, p.X.Max, p.Y.Min, p.Y.Max = lo[0], hi[0], lo[1], hi[1]
+	room(p)
 	p.X.Tick.Marker, p.Y.Tick.Marker = few{p.X.Tick.Marker}, few{p.Y.Tick.Marker}
 	p.X.Tick.Label.Font.Size, p.Y.Tick.Label.Font.Size = 6.5, 6.5
 	return render(p, tinyW, tinyH, f.Name, fmt.Sprintf("%s along %s", c.Y.Name, c.X.Name), t)
@@ -297,6 +300,8 @@ func contrastFigure(c *Contrast, p *Pair, t theme) []byte {
 	y.Name = clip(c.Minus[0], 16) + " less " + clip(c.Minus[1], 16)
 	fig := frame(clean(c.X), y)
 	curves(fig, p.Grid, 1.5)
+	fig.Y.Min, fig.Y.Max = math.Min(fig.Y.Min, 0), math.Max(fig.Y.Max, 0)
+	room(fig)
 	if len(p.Grid) > 0 {
 		fig.Add(line([]float64{p.Grid[0].X, p.Grid[len(p.Grid)-1].X}, []float64{0, 0}, "soft", 0.8))
 	}

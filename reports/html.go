@@ -202,7 +202,7 @@ a:focus-visible,summary:focus-visible,.scroll:focus-visible{outline:2px solid va
 nav ol{list-style:none;display:flex;flex-wrap:wrap;gap:.2rem 1.2rem;margin:0;padding:.9rem 0 0;font-size:.88rem}
 .scroll{overflow-x:auto;margin:1rem 0}
 table{border-collapse:collapse;font-size:.86rem;font-variant-numeric:tabular-nums lining-nums}
-caption{text-align:left;color:var(--soft);padding:0 0 .35rem;max-width:46rem;caption-side:top}
+caption{text-align:left;color:var(--soft);padding:0 0 .35rem;caption-side:top;width:max-content;max-width:min(46rem,88vw)}
 th,td{text-align:left;padding:.28rem .9rem .28rem 0;vertical-align:baseline;font-weight:400}
 thead th{color:var(--soft);border-bottom:1px solid var(--soft);vertical-align:bottom;white-space:nowrap}
 tbody tr{border-bottom:1px solid var(--rule)}

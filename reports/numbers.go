@@ -59,6 +59,9 @@ func fixed(v float64, d int) string {
 	return strings.Replace(s, "-", minus, 1)
 }
 
+// Short writes v to n significant digits, as people read it.
+func Short(v float64, n int) string { return short(v, n) }
+
 // short writes v to n significant digits.
 func short(v float64, n int) string {
 	switch {
@@ -102,7 +105,24 @@ func place(a Axis, x float64) string {
 	if a.Date {
 		return isoDate(x)
 	}
-	return short(x, 4)
+	return exact(round(x, 4))
+}
+
+// exact writes a number that was set or rounded, without trailing zeros.
+func exact(v float64) string {
+	if a := math.Abs(v); a >= 1e7 || a > 0 && a < 1e-4 {
+		return short(v, 4)
+	}
+	return strings.Replace(strconv.FormatFloat(v, 'f', -1, 64), "-", minus, 1)
+}
+
+// round rounds to n significant digits.
+func round(v float64, n int) float64 {
+	r, err := strconv.ParseFloat(strconv.FormatFloat(v, 'g', n, 64), 64)
+	if err != nil {
+		return v
+	}
+	return r
 }
 
 // ReadingText writes a reading's value and interval as people read them.

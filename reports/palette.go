@@ -23,7 +23,9 @@ var inks = []struct {
 	{"curve", "#1f5f8b", "#79b8e6", color.RGBA{R: 4, G: 1, B: 1, A: 255}},
 	{"mark", "#a2431c", "#f0a27c", color.RGBA{R: 5, G: 1, B: 1, A: 255}},
 	{"alarm", "#8c2f6b", "#e59ccb", color.RGBA{R: 6, G: 1, B: 1, A: 255}},
-	{"point", "#4a5158", "#c3c9d0", color.RGBA{R: 7, G: 1, B: 1, A: 255}},
+	{"point", "#6a7178", "#9aa2aa", color.RGBA{R: 7, G: 1, B: 1, A: 255}},
+	{"band", "#d3e2ee", "#21394b", color.RGBA{R: 8, G: 1, B: 1, A: 255}},
+	{"beyond", "#ebf1f5", "#1b2832", color.RGBA{R: 9, G: 1, B: 1, A: 255}},
 }
 
 // Grounds that the inks stand on.
@@ -40,10 +42,4 @@ func ink(name string) color.RGBA {
 		}
 	}
 	panic("reports: no ink " + name)
-}
-
-// faint is an ink with some of the ground showing through.
-func faint(name string, alpha uint8) color.NRGBA {
-	c := ink(name)
-	return color.NRGBA{R: c.R, G: c.G, B: c.B, A: alpha}
 }

@@ -136,22 +136,11 @@ func terminalFits(w io.Writer, c *Curve, fits []*Fit, opt TerminalOptions, alarm
 			if !ok {
 				n = len(notes) + 1
 				number[x.Name] = n
-				notes = append(notes, fmt.Sprintf("%d %s", n, strings.ReplaceAll(x.Name, "_", " ")))
+				notes = append(notes, fmt.Sprintf("%d\u00a0%s", n, strings.ReplaceAll(strings.ReplaceAll(x.Name, "_", " "), " ", "\u00a0")))
 			}
 			marks = append(marks, fmt.Sprint(n))
 		}
 		flags[i] = strings.Join(marks, " ")
-	}
-	wide := func() int { // of the table with one more column of width k
-		sum := 0
-		for k := range header {
-			most := len([]rune(header[k]))
-			for _, r := range rows {
-				most = max(most, len([]rune(r[k])))
-			}
-			sum += most + 2
-		}
-		return sum
 	}
 	flagWidth := 0
 	if len(notes) > 0 {
@@ -168,7 +157,7 @@ func terminalFits(w io.Writer, c *Curve, fits []*Fit, opt TerminalOptions, alarm
 			cells[i] = readingCell(c, f, name)
 			most = max(most, len([]rune(cells[i])))
 		}
-		if wide()+most+2+flagWidth > opt.Width {
+		if naturalWidth(header, rows)+most+2+flagWidth > opt.Width {
 			omitted = append(omitted, name)
 			continue
 		}
@@ -211,6 +200,10 @@ func Table(w io.Writer, header []string, rows [][]string, notes []string, width 
 				}
 			}
 		}
+		wrapMode, most := tw.WrapNone, 0
+		if naturalWidth(header, rows) > width {
+			wrapMode, most = tw.WrapNormal, max(width, 20)
+		}
 		t := tablewriter.NewTable(w,
 			tablewriter.WithRenderer(renderer.NewBlueprint(tw.Rendition{
 				Borders:  tw.BorderNone,
@@ -218,10 +211,10 @@ func Table(w io.Writer, header []string, rows [][]string, notes []string, width 
 				Settings: tw.Settings{Separators: tw.Separators{BetweenColumns: tw.Off, ShowHeader: tw.On}, Lines: tw.Lines{ShowHeaderLine: tw.On}},
 			})),
 			tablewriter.WithConfig(tablewriter.Config{
-				MaxWidth: width,
-				Header: tw.CellConfig{Formatting: tw.CellFormatting{AutoFormat: tw.Off, AutoWrap: tw.WrapNormal},
+				MaxWidth: most,
+				Header: tw.CellConfig{Formatting: tw.CellFormatting{AutoFormat: tw.Off, AutoWrap: wrapMode},
 					Alignment: tw.CellAlignment{PerColumn: right}, Padding: tw.CellPadding{Global: tw.Padding{Left: "", Right: "  ", Overwrite: true}}},
-				Row: tw.CellConfig{Formatting: tw.CellFormatting{AutoWrap: tw.WrapNormal},
+				Row: tw.CellConfig{Formatting: tw.CellFormatting{AutoWrap: wrapMode},
 					Alignment: tw.CellAlignment{PerColumn: right}, Padding: tw.CellPadding{Global: tw.Padding{Left: "", Right: "  ", Overwrite: true}}},
 			}))
 		clean := func(in []string) []string {
@@ -242,6 +235,21 @@ func Table(w io.Writer, header []string, rows [][]string, notes []string, width 
 	}
 }
 
+// naturalWidth is how wide a table is when no cell is wrapped.
+func naturalWidth(header []string, rows [][]string) int {
+	sum := 0
+	for k := range header {
+		most := len([]rune(header[k]))
+		for _, r := range rows {
+			if k < len(r) {
+				most = max(most, len([]rune(r[k])))
+			}
+		}
+		sum += most + 2
+	}
+	return sum
+}
+
 // numeric tells whether a cell reads as a number, with or without an interval.
 func numeric(s string) bool {
 	s = strings.TrimLeft(s, "*"+minus+"-+")
@@ -260,7 +268,7 @@ func wrapText(s string, width int, indent string) string {
 	var b strings.Builder
 	b.WriteString(lead)
 	col := len(lead)
-	for i, word := range strings.Fields(s) {
+	for i, word := range strings.FieldsFunc(s, func(r rune) bool { return r == ' ' || r == '\n' }) {
 		n := visible(word)
 		if i > 0 && col+1+n > width {
 			b.WriteString("\n" + indent)

@@ -198,7 +198,11 @@ func (e *env) printValues(values []runner.Values, def *spec.Curve) error {
 		}
 		return name + " (" + u + ")"
 	}
-	header := []string{"fit", unit(def.Along.Name.Text, def.Along.Unit), unit(def.Response.Name.Text, def.Response.Unit), "lower", "upper", "slope"}
+	var header []string
+	for _, b := range def.By {
+		header = append(header, b.Name.Text)
+	}
+	header = append(header, unit(def.Along.Name.Text, def.Along.Unit), unit(def.Response.Name.Text, def.Response.Unit), "lower", "upper", "slope")
 	var rows [][]string
 	beyond := false
 	for _, v := range values {
@@ -209,7 +213,7 @@ func (e *env) printValues(values []runner.Values, def *spec.Curve) error {
 				place += " *"
 				beyond = true
 			}
-			rows = append(rows, []string{v.Fit, place, val, lo, hi, fmt.Sprintf("%.4g", p.Slope)})
+			rows = append(rows, append(append([]string(nil), v.Group...), place, val, lo, hi, reports.Short(p.Slope, 4)))
 		}
 	}
 	notes := []string{fmt.Sprintf("%g%% pointwise band.", 100*def.Band.Level)}

@@ -113,12 +113,12 @@ func (e *env) printWhy(a *runner.Answer) {
 		fmt.Fprintf(w, "\n%s", plot)
 	}
 	if len(f.Evidence.Others) > 0 {
-		fmt.Fprintln(w, "\nWhat the rules would take, each alone:")
+		fmt.Fprintln(w, "\nWhat the rules would take, each alone (shift: largest, in half-widths of the band):")
 		var rows [][]string
 		for _, o := range f.Evidence.Others {
 			rows = append(rows, []string{o.Rule, fmt.Sprintf("%.3f", o.EDF), fmt.Sprintf("%.4g", o.Lambda), fmt.Sprintf("%.2f", o.Shift)})
 		}
-		reports.Table(w, []string{"rule", "edf", "lambda", "largest shift (half-widths)"}, rows, nil, wide)
+		reports.Table(w, []string{"rule", "edf", "lambda", "shift"}, rows, nil, wide)
 	}
 	if len(f.Flags) > 0 {
 		fmt.Fprintln(w, "\nFlags:")
@@ -144,12 +144,17 @@ func (e *env) printReadings(a *runner.Answer, wide int) {
 	}
 	fmt.Fprintln(e.out, "\nReadings:")
 	var rows [][]string
+	notes := []string{fmt.Sprintf("%g%% intervals.", 100*a.Curve.Level)}
 	for _, r := range a.Fit.Readings {
 		val, lo, hi := reports.ReadingText(a.Curve.X, r)
-		rows = append(rows, []string{r.Name, r.Kind, val, lo, hi, r.Unit, r.Note})
+		mark := ""
+		if r.Note != "" {
+			mark = fmt.Sprintf("(%d)", len(notes))
+			notes = append(notes, mark+" "+r.Note)
+		}
+		rows = append(rows, []string{r.Name, r.Kind, val, lo, hi, r.Unit, mark})
 	}
-	reports.Table(e.out, []string{"reading", "kind", "value", "lower", "upper", "unit", "note"}, rows,
-		[]string{fmt.Sprintf("%g%% intervals.", 100*a.Curve.Level)}, wide)
+	reports.Table(e.out, []string{"reading", "kind", "value", "lower", "upper", "unit", ""}, rows, notes, wide)
 }
 
 // wrap breaks text at words so that no line is wider than width; lines after
