@@ -32,7 +32,7 @@ type curveFits struct {
 	fits    []*storedFit
 	values  [][]value // of fits[i]
 	by      []string
-	Reused  int
+	reused  []bool    // of fits[i]: it came from the store
 	verdict []verdict // of fits[i]; set by judge
 }
 
@@ -79,7 +79,6 @@ func (r *curveRun) fit(ctx context.Context, c *spec.Curve) (*curveFits, error) {
 	r.progress.Start(c.Name.Text, len(groups))
 
 	w := newWeighing(c, f)
-	var reused atomic.Int64
 	eg, ectx := errgroup.WithContext(ctx)
 	next := make(chan *job)
 	eg.Go(func() error {
@@ -97,11 +96,9 @@ func (r *curveRun) fit(ctx context.Context, c *spec.Curve) (*curveFits, error) {
 		eg.Go(func() error {
 			ft := &fitter{}
 			for j := range next {
-				n, err := r.part(ft, c, w, j)
-				if err != nil {
+				if err := r.part(ft, c, w, j); err != nil {
 					return err
 				}
-				reused.Add(int64(n))
 				r.done.Add(1)
 				r.progress.Add(len(j.groups))
 			}
@@ -116,7 +113,6 @@ func (r *curveRun) fit(ctx context.Context, c *spec.Curve) (*curveFits, error) {
 		}
 		return nil, err
 	}
-	cf.Reused = int(reused.Load())
 	m := manifest{Count: f.count, Aside: aside}
 	for _, j := range jobs {
 		m.Parts = append(m.Parts, j.digest)
@@ -124,6 +120,7 @@ func (r *curveRun) fit(ctx context.Context, c *spec.Curve) (*curveFits, error) {
 		for i, g := range j.groups {
 			cf.fits = append(cf.fits, j.out.Fits[i])
 			cf.values = append(cf.values, g.values)
+			cf.reused = append(cf.reused, j.reused[i])
 			m.Zero += j.out.Fits[i].ZeroW
 		}
 	}
@@ -149,7 +146,6 @@ func (r *curveRun) recall(c *spec.Curve, key string) *curveFits {
 	if err != nil {
 		return nil
 	}
-	cf.Reused = len(cf.fits)
 	return cf
 }
 
@@ -177,6 +173,7 @@ func openCurve(st *store.Store, c *spec.Curve, dig string, b []byte) (*curveFits
 			}
 			cf.fits = append(cf.fits, f)
 			cf.values = append(cf.values, vs)
+			cf.reused = append(cf.reused, true)
 		}
 	}
 	sort.Sort(byGroup{cf})
@@ -191,6 +188,7 @@ func (b byGroup) Less(i, j int) bool { return compareValues(b.values[i], b.value
 func (b byGroup) Swap(i, j int) {
 	b.fits[i], b.fits[j] = b.fits[j], b.fits[i]
 	b.values[i], b.values[j] = b.values[j], b.values[i]
+	b.reused[i], b.reused[j] = b.reused[j], b.reused[i]
 }
 
 func byNames(c *spec.Curve) []string {
@@ -236,6 +234,7 @@ type job struct {
 	rules  []*spec.Rule
 	except []string
 	out    *storedPart
+	reused []bool // of groups[i]
 	digest string
 }
 
@@ -327,9 +326,10 @@ func rerank(b []int32) {
 	}
 }
 
-// part brings one part up to date and says how many of its fits were reused.
-func (r *curveRun) part(ft *fitter, c *spec.Curve, w *weighing, j *job) (reused int, err error) {
+// part brings one part up to date.
+func (r *curveRun) part(ft *fitter, c *spec.Curve, w *weighing, j *job) error {
 	by := byNames(c)
+	j.reused = make([]bool, len(j.groups))
 	keys := make([]string, len(j.groups))
 	fits := make([]*storedFit, len(j.groups))
 	pk := newKey("part", objectVersion)
@@ -340,7 +340,7 @@ func (r *curveRun) part(ft *fitter, c *spec.Curve, w *weighing, j *job) (reused 
 	for i := range j.groups {
 		f, rule, err := r.describe(ft, c, w, j, i)
 		if err != nil {
-			return 0, err
+			return err
 		}
 		fits[i], keys[i] = f, f.Key
 		j.rules = append(j.rules, rule)
@@ -352,7 +352,10 @@ func (r *curveRun) part(ft *fitter, c *spec.Curve, w *weighing, j *job) (reused 
 		var p storedPart
 		if cbor.Unmarshal(b, &p) == nil && len(p.Fits) == len(fits) {
 			j.out, j.digest = &p, dig
-			return len(fits), nil
+			for i := range j.reused {
+				j.reused[i] = true
+			}
+			return nil
 		}
 	}
 	// A changed row refits its group alone: the part's last object still
@@ -371,25 +374,25 @@ func (r *curveRun) part(ft *fitter, c *spec.Curve, w *weighing, j *job) (reused 
 	for i := range fits {
 		if f := old[label(by, fits[i].Group)+"\n"+keys[i]]; f != nil {
 			fits[i] = f
-			reused++
+			j.reused[i] = true
 			continue
 		}
 		if fits[i].Failed != "" {
 			continue
 		}
 		if err := r.compute(ft, c, w, j, i, fits[i]); err != nil {
-			return reused, fmt.Errorf("%s: %w", fitName(c.Name.Text, label(by, j.text[i])), err)
+			return fmt.Errorf("%s: %w", fitName(c.Name.Text, label(by, j.text[i])), err)
 		}
 	}
 	j.out = &storedPart{Fits: fits}
 	b, err := codec.Marshal(j.out)
 	if err != nil {
-		return reused, err
+		return err
 	}
 	if j.digest, err = r.store.Put(text, b); err != nil {
-		return reused, err
+		return err
 	}
-	return reused, r.store.SetSlot(slot, j.digest)
+	return r.store.SetSlot(slot, j.digest)
 }
 
 // load puts group i's rows into the worker's memory, collapsed. A group that

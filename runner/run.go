@@ -208,18 +208,18 @@ func (r *Run) record(started time.Time) *Record {
 // skipped or refused, whether it came from the store or not.
 func (cf *curveFits) counts() Counts {
 	c := Counts{Total: len(cf.fits)}
-	for _, v := range cf.verdict {
-		switch v.Outcome {
-		case "":
-		case spec.Refuse:
+	for i, v := range cf.verdict {
+		switch {
+		case v.Outcome == spec.Refuse:
 			c.Refused++
-		default:
+		case !v.fits():
 			c.Skipped++
+		case cf.reused[i]:
+			c.Reused++
+		default:
+			c.Computed++
 		}
 	}
-	standing := c.Total - c.Skipped - c.Refused
-	c.Reused = min(cf.Reused, standing)
-	c.Computed = standing - c.Reused
 	return c
 }
 

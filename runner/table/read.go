@@ -213,6 +213,9 @@ func (s *Source) header(path string, text []byte) (*header, []byte, *Problem) {
 	if len(bytes.TrimSpace(text)) == 0 {
 		return nil, nil, &Problem{Path: path, Text: "is empty; expected a header line and rows"}
 	}
+	if i := bytes.IndexByte(text, '\r'); i >= 0 && bytes.IndexByte(text, '\n') < 0 {
+		return fail(0, "the lines end in lone CR; save the file with LF or CRLF at the ends of lines")
+	}
 	h := &header{path: path, sep: s.sep(path)}
 	sc := scanner{text: text, sep: h.sep}
 	for {

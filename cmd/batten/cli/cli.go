@@ -45,6 +45,10 @@ func Run(ctx context.Context, args []string, stdin io.Reader, stdout, stderr io.
 	root.SetOut(stdout)
 	root.SetErr(stderr)
 	err := root.ExecuteContext(ctx)
+	if err != nil && strings.HasPrefix(err.Error(), "unknown command") {
+		// the library has no type for it
+		err = linef("%w\n  see: batten --help", err)
+	}
 	if err != nil {
 		e.explain(err)
 	}

@@ -1,0 +1,134 @@
+package cli
+
+import (
+	"bytes"
+	"context"
+	"io/fs"
+	"os"
+	"path/filepath"
+	"strconv"
+	"strings"
+	"testing"
+
+	"github.com/rogpeppe/go-internal/testscript"
+)
+
+const top = "../../.."
+
+func TestMain(m *testing.M) {
+	testscript.Main(m, map[string]func(){
+		"batten": func() {
+			os.Exit(Run(context.Background(), os.Args[1:], os.Stdin, os.Stdout, os.Stderr))
+		},
+	})
+}
+
+// TestScripts runs testdata/script: the program as a user meets it.
+func TestScripts(t *testing.T) {
+	testscript.Run(t, testscript.Params{
+		Dir: top + "/testdata/script",
+		Setup: func(e *testscript.Env) error {
+			e.Setenv("BATTEN_WHO", "A. Tester")
+			for _, name := range []string{"first", "pears"} {
+				if err := copyTree(filepath.Join(top, "examples", name), filepath.Join(e.WorkDir, name)); err != nil {
+					return err
+				}
+			}
+			return nil
+		},
+		Cmds: map[string]func(*testscript.TestScript, bool, []string){
+			// exits N cmd...: the command must end with that very status
+			"exits": func(ts *testscript.TestScript, _ bool, args []string) {
+				want, err := strconv.Atoi(args[0])
+				ts.Check(err)
+				var out, errs bytes.Buffer
+				wd := ts.MkAbs(".")
+				argv := args[2:]
+				for i, a := range argv {
+					if _, err := os.Stat(filepath.Join(wd, a)); err == nil && !strings.HasPrefix(a, "-") {
+						argv[i] = filepath.Join(wd, a)
+					}
+				}
+				if got := Run(context.Background(), argv, nil, &out, &errs); got != want {
+					ts.Fatalf("exit status %d, want %d\n%s\n%s", got, want, out.String(), errs.String())
+				}
+			},
+		},
+	})
+}
+
+func copyTree(from, to string) error {
+	return filepath.WalkDir(from, func(p string, d fs.DirEntry, err error) error {
+		if err != nil {
+			return err
+		}
+		rel, _ := filepath.Rel(from, p)
+		if d.IsDir() {
+			if n := d.Name(); n == "out" || n == ".batten" || n == "make" {
+				return filepath.SkipDir
+			}
+			return os.MkdirAll(filepath.Join(to, rel), 0o777)
+		}
+		b, err := os.ReadFile(p)
+		if err != nil {
+			return err
+		}
+		return os.WriteFile(filepath.Join(to, rel), b, 0o666)
+	})
+}
+
+// TestBadData runs every study of testdata/baddata and holds it to its
+// want.txt: exit status, what is said, and that nothing is half written.
+func TestBadData(t *testing.T) {
+	dirs, err := os.ReadDir(top + "/testdata/baddata")
+	if err != nil {
+		t.Fatal(err)
+	}
+	n := 0
+	for _, d := range dirs {
+		if !d.IsDir() {
+			continue
+		}
+		n++
+		t.Run(d.Name(), func(t *testing.T) {
+			t.Parallel()
+			study := filepath.Join(t.TempDir(), d.Name())
+			if err := copyTree(filepath.Join(top, "testdata/baddata", d.Name()), study); err != nil {
+				t.Fatal(err)
+			}
+			b, err := os.ReadFile(filepath.Join(study, "want.txt"))
+			if err != nil {
+				t.Fatal(err)
+			}
+			lines := strings.Split(strings.TrimSpace(string(b)), "\n")
+			want, err := strconv.Atoi(strings.TrimSpace(lines[0]))
+			if err != nil {
+				t.Fatal(err)
+			}
+			var out, errs bytes.Buffer
+			got := Run(context.Background(), []string{"run", study}, nil, &out, &errs)
+			said := out.String() + errs.String()
+			if got != want {
+				t.Errorf("exit status %d, want %d:\n%s", got, want, said)
+			}
+			for _, l := range lines[1:] {
+				if l = strings.TrimSpace(l); !strings.Contains(said, l) {
+					t.Errorf("nothing says %q:\n%s", l, said)
+				}
+			}
+			_, err = os.Stat(filepath.Join(study, "out"))
+			if want != 0 && err == nil {
+				t.Error("there is an out/ folder after a failed run")
+			}
+			_ = filepath.WalkDir(study, func(p string, d fs.DirEntry, err error) error {
+				if err == nil && strings.Contains(d.Name(), "tmp-") {
+					t.Errorf("a temporary file was left: %s", p)
+				}
+				return nil
+			})
+		})
+	}
+	if n < 60 {
+		t.Errorf("only %d studies were run", n)
+	}
+}
