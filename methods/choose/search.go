@@ -98,7 +98,7 @@ func (s *search) bounds() error {
 		s.lo = max(2+1e-6, s.rule.DFAtLeast)
 	}
 	if s.rule.DFAtMost > 0 {
-		s.hi = min(s.rule.DFAtMost, m-1e-6*m)
+		s.hi = min(s.rule.DFAtMost, m-float64(1e-6*m))
 	}
 	if s.inflate > 1 {
 		// beyond n/inflate the inflated score means nothing
@@ -376,7 +376,7 @@ func (s *search) refine(a float64, p point, b float64) point {
 		}
 	}
 	if u > a-spacing && u < b+spacing {
-		if q := s.at(u); q.Score <= best.Score+1e-12*math.Abs(best.Score) {
+		if q := s.at(u); q.Score <= best.Score+float64(1e-12*math.Abs(best.Score)) {
 			best = q
 		}
 	}
@@ -454,7 +454,7 @@ func (s *search) polish(u float64) (root float64, inside bool) {
 			flo *= 0.5
 		}
 	}
-	t := 0.5 * (lo + hi)
+	t := float64(0.5 * (lo + hi))
 	return u + float64((t-stencil)*fine), true
 }
 

@@ -94,7 +94,7 @@ func studentTail(t, df float64) (tail, density float64) {
 	lx := -log1p(t2 / df) // log x
 	c := gammaRatio(df/2) / math.Sqrt(math.Pi)
 	density = float64(c / math.Sqrt(df) * Exp(float64(0.5*(df+1))*lx))
-	x, a := df/(df+t2), df/2
+	x, a := df/(df+t2), float64(df/2)
 	y := t2 / (df + t2)
 	// x^a (1-x)^(1/2) / B(a, 1/2)
 	front := float64(float64(c*Exp(float64(a*lx))) * math.Sqrt(y))
@@ -211,7 +211,7 @@ func expand(z, df float64) float64 {
 		}
 		return float64(s * z)
 	}
-	g1 := poly(1, 1) / 4
+	g1 := float64(poly(1, 1) / 4)
 	g2 := poly(3, 16, 5) / 96
 	g3 := poly(-15, 17, 19, 3) / 384
 	g4 := poly(-945, -1920, 1482, 776, 79) / 92160

@@ -49,7 +49,7 @@ func root(c *spline.Curve, level, a, b float64) float64 {
 	va, _, _ := c.At(a)
 	sa := sign(va - level)
 	for range 200 {
-		mid := a + 0.5*(b-a)
+		mid := a + float64(0.5*(b-a))
 		if mid <= a || mid >= b {
 			break
 		}

@@ -111,7 +111,7 @@ func (k *kernel) before(a, b float64) {
 	// phi” = 1 on [a, b], phi = phi' = 0 at a, straight from b to the knot.
 	x0, h := k.x[0], k.x[1]-k.x[0]
 	l, gap := b-a, x0-b
-	first := float64(l * (0.5*l + gap)) // integral of x0 - t
+	first := float64(l * (float64(0.5*l) + gap)) // integral of x0 - t
 	k.t[0] += l + first/h
 	k.t[1] -= first / h
 	k.piece(0).left = float64(0.5*float64(l*l)) + float64(l*gap)
@@ -126,7 +126,7 @@ func (k *kernel) after(a, b float64) {
 	m := len(k.x)
 	xm, h := k.x[m-1], k.x[m-1]-k.x[m-2]
 	l, gap := b-a, a-xm
-	first := float64(l * (0.5*l + gap))
+	first := float64(l * (float64(0.5*l) + gap))
 	k.t[m-1] += l + first/h
 	k.t[m-2] -= first / h
 	k.piece(m - 2).right = float64(0.5*float64(l*l)) + float64(l*gap)
@@ -181,7 +181,7 @@ func (k *kernel) norm() {
 			cuts[1], cuts[2] = 0, h
 		}
 		for c := 0; c < 3; c++ {
-			mid, half := 0.5*(cuts[c]+cuts[c+1]), 0.5*(cuts[c+1]-cuts[c])
+			mid, half := float64(0.5*(cuts[c]+cuts[c+1])), float64(0.5*(cuts[c+1]-cuts[c]))
 			if half <= 0 {
 				continue
 			}

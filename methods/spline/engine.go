@@ -41,7 +41,7 @@ type state struct{ lam, zeta, b, alpha, c float64 }
 // start is the state at distance h from a first knot with weight w and
 // response y, before which nothing is known.
 func start(h, w, y, q float64) state {
-	return state{b: 1 / h, alpha: -y / h, c: 1/float64(float64(w*h)*h) + float64(q*h)/3}
+	return state{b: 1 / h, alpha: -y / h, c: 1/float64(float64(w*h)*h) + float64(float64(q*h)*third)}
 }
 
 // step takes in a reading y of weight w and goes on by h. den is the factor of
@@ -53,23 +53,26 @@ func (s state) step(h, w, y, q float64) (next state, den float64) {
 	u1 := 1 + u
 	qh := float64(q * h)
 	dh := float64(d * h)
-	den = float64(u1*u1) + float64(float64(dh*h)*(s.c+qh/3))
+	den = float64(u1*u1) + float64(float64(dh*h)*(s.c+float64(qh*third)))
 	r := 1 / den
 	next.lam = float64(d * r)
-	next.b = float64((float64(s.b*u1) + float64(dh*(s.c+0.5*qh))) * r)
+	next.b = float64((float64(s.b*u1) + float64(dh*(s.c+float64(qh*0.5)))) * r)
 	qd := float64(float64(float64(qh*h)*h) * d)
-	next.c = float64((s.c + float64(qh*(u1+float64(u*u)/3)) + float64(qd*(s.c/3+qh/12))) * r)
+	next.c = float64((s.c + float64(qh*(u1+float64(float64(u*u)*third))) + float64(qd*(float64(s.c*third)+float64(qh*twelfth)))) * r)
 	next.zeta = float64((float64(u1*z) + float64(dh*s.alpha)) * r)
-	next.alpha = float64((float64((u1-qd/6)*s.alpha) - float64((float64(h*s.c)+float64(float64(qh*h)*(0.5+u/6)))*z)) * r)
+	next.alpha = float64((float64((u1-float64(qd*sixth))*s.alpha) - float64((float64(h*s.c)+float64(float64(qh*h)*(0.5+float64(u*sixth))))*z)) * r)
 	return next, den
 }
 
+const (
+	third   = 1.0 / 3
+	sixth   = 1.0 / 6
+	twelfth = 1.0 / 12
+)
+
 // Workspace is the memory of fits. The zero value is ready; it grows as it is
 // used and must not be shared between goroutines.
-type Workspace struct {
-	forward []state
-	fit     Fit
-}
+type Workspace struct{ forward, backward []state }
 
 // Criteria is what one lambda gives: the scores a rule may minimise.
 type Criteria struct {
@@ -123,77 +126,145 @@ func (ws *Workspace) Criteria(d *Data, lambda float64) Criteria {
 	return ws.evaluate(d, lambda, true)
 }
 
-// evaluate runs the forward filter, then the backward one, combining the two
-// at every knot as it goes.
+// filter runs both filters over the knots into ws.forward and ws.backward,
+// in one loop: neither waits for the other, so the processor works on both.
+// It returns the product of the forward determinant's factors where it is
+// wanted. The body is state.step written out on plain variables, which the
+// compiler keeps in registers.
+func (ws *Workspace) filter(d *Data, q float64, wantDet bool) (det logProduct) {
+	m := len(d.X)
+	if cap(ws.forward) < m {
+		ws.forward, ws.backward = make([]state, m+m/4), make([]state, m+m/4)
+	}
+	fw, bw := ws.forward[:m], ws.backward[:m]
+	x, y, w := d.X[:m], d.yc[:m], d.W[:m]
+	fw[0], bw[m-1] = state{}, state{}
+	f := start(x[1]-x[0], w[0], y[0], q)
+	g := start(x[m-1]-x[m-2], w[m-1], y[m-1], q)
+	fw[1], bw[m-2] = f, g
+	fl, fz, fb, fa, fc := f.lam, f.zeta, f.b, f.alpha, f.c
+	gl, gz, gb, ga, gc := g.lam, g.zeta, g.b, g.alpha, g.c
+	xf, xg := x[1], x[m-2]
+	p := 1.0
+	for i := 1; i < m-1; i++ {
+		// forward over the gap behind knot i
+		to := x[i+1]
+		h := to - xf
+		xf = to
+		dd := fl + w[i]
+		z := fz + float64(w[i]*y[i])
+		u := float64(h * fb)
+		u1 := 1 + u
+		qh := float64(q * h)
+		dh := float64(dd * h)
+		den := float64(u1*u1) + float64(float64(dh*h)*(fc+float64(qh*third)))
+		r := 1 / den
+		qd := float64(float64(float64(qh*h)*h) * dd)
+		nb := float64((float64(fb*u1) + float64(dh*(fc+float64(qh*0.5)))) * r)
+		nc := float64((fc + float64(qh*(u1+float64(float64(u*u)*third))) + float64(qd*(float64(fc*third)+float64(qh*twelfth)))) * r)
+		nz := float64((float64(u1*z) + float64(dh*fa)) * r)
+		na := float64((float64((u1-float64(qd*sixth))*fa) - float64((float64(h*fc)+float64(float64(qh*h)*(0.5+float64(u*sixth))))*z)) * r)
+		fl, fz, fb, fa, fc = float64(dd*r), nz, nb, na, nc
+		s := &fw[i+1]
+		s.lam, s.zeta, s.b, s.alpha, s.c = fl, fz, fb, fa, fc
+		if wantDet {
+			if den < 1e100 {
+				if p = float64(p * den); p > 1e100 {
+					det.times(p)
+					p = 1
+				}
+			} else {
+				det.times(den)
+			}
+		}
+
+		// backward over the gap before knot k
+		k := m - 1 - i
+		to = x[k-1]
+		h = xg - to
+		xg = to
+		dd = gl + w[k]
+		z = gz + float64(w[k]*y[k])
+		u = float64(h * gb)
+		u1 = 1 + u
+		qh = float64(q * h)
+		dh = float64(dd * h)
+		r = 1 / (float64(u1*u1) + float64(float64(dh*h)*(gc+float64(qh*third))))
+		qd = float64(float64(float64(qh*h)*h) * dd)
+		nb = float64((float64(gb*u1) + float64(dh*(gc+float64(qh*0.5)))) * r)
+		nc = float64((gc + float64(qh*(u1+float64(float64(u*u)*third))) + float64(qd*(float64(gc*third)+float64(qh*twelfth)))) * r)
+		nz = float64((float64(u1*z) + float64(dh*ga)) * r)
+		na = float64((float64((u1-float64(qd*sixth))*ga) - float64((float64(h*gc)+float64(float64(qh*h)*(0.5+float64(u*sixth))))*z)) * r)
+		gl, gz, gb, ga, gc = float64(dd*r), nz, nb, na, nc
+		s = &bw[k-1]
+		s.lam, s.zeta, s.b, s.alpha, s.c = gl, gz, gb, ga, gc
+	}
+	if wantDet {
+		det.times(p)
+		det.times(fl + w[m-1])
+	}
+	return det
+}
+
+// evaluate runs the filters and combines them at every knot.
 func (ws *Workspace) evaluate(d *Data, lambda float64, reml bool) Criteria {
 	m := len(d.X)
 	if m < MinDistinct {
 		panic("spline: fewer than 3 distinct x")
 	}
-	if cap(ws.forward) < m {
-		ws.forward = make([]state, m+m/4)
-	}
-	fw := ws.forward[:m]
-	x, y, w := d.X[:m], d.yc[:m], d.W[:m]
 	q := 1 / lambda
-	var det logProduct
-	s := start(x[1]-x[0], w[0], y[0], q)
-	for i := 1; ; i++ {
-		fw[i] = s
-		if i == m-1 {
-			break
-		}
-		var den float64
-		s, den = s.step(x[i+1]-x[i], w[i], y[i], q)
-		if reml {
-			det.times(den)
-		}
-	}
-	fw[0] = state{}
-
+	det := ws.filter(d, q, reml)
+	fw, bw := ws.forward[:m], ws.backward[:m]
+	x, y, w := d.X[:m], d.yc[:m], d.W[:m]
 	out := Criteria{Lambda: lambda, N: d.N}
-	var sum, part sums
-	back := state{}
-	var gammaNext float64 // g'' at the knot to the right
-	for i := m - 1; i >= 0; i-- {
-		f := &fw[i]
-		j, n, kap, a, b := combine(f, &back, i == 0 || i == m-1)
-		tot := w[i] + j
-		inv := 1 / tot
-		e := y[i] - n/j // leave-one-out residual of the knot's mean
-		rest := float64(j * inv)
-		part.edf += float64(w[i] * inv)
-		part.rest += rest
-		r := float64(rest * e)
-		part.rss += float64(float64(w[i]*r) * r)
-		if !d.tied {
-			part.loo += float64(float64(w[i]*e) * e)
-		} else {
-			lo, hi := d.First[i], d.First[i+1]
-			for k := lo; k < hi; k++ {
-				wk := d.RowW[k]
-				ek := float64((d.RowY[k]-d.Y[i]+r)*tot) / (w[i] - wk + j)
-				part.loo += float64(float64(wk*ek) * ek)
+	var sum sums
+	var gammaLast float64 // g'' at the knot to the left
+	for lo := 0; lo < m; lo += block {
+		hi := min(lo+block, m)
+		var edf, restSum, rss, loo, rough float64
+		for i := lo; i < hi; i++ {
+			f, g := &fw[i], &bw[i]
+			b := f.b + g.b
+			a := f.alpha + g.alpha
+			kap := 0.0
+			if i > 0 && i < m-1 {
+				kap = 1 / (f.c + g.c)
+			}
+			kb := float64(kap * b)
+			j := f.lam + g.lam + float64(kb*b)
+			n := f.zeta + g.zeta - float64(kb*a)
+			wi := w[i]
+			tot := wi + j
+			inv := 1 / tot
+			e := y[i] - n/j // leave-one-out residual of the knot's mean
+			rest := float64(j * inv)
+			edf += float64(wi * inv)
+			restSum += rest
+			r := float64(rest * e)
+			rss += float64(float64(wi*r) * r)
+			if !d.tied {
+				loo += float64(float64(wi*e) * e)
+			} else {
+				for k := d.First[i]; k < d.First[i+1]; k++ {
+					wk := d.RowW[k]
+					ek := float64((d.RowY[k]-d.Y[i]+r)*tot) / (wi - wk + j)
+					loo += float64(float64(wk*ek) * ek)
+				}
+			}
+			if reml {
+				gamma := -float64(float64(kap*(a+float64(b*(y[i]-r)))) * q)
+				if i > 0 {
+					h := x[i] - x[i-1]
+					rough += float64(float64(h*third) * (float64(gamma*gamma) + float64(gamma*gammaLast) + float64(gammaLast*gammaLast)))
+				}
+				gammaLast = gamma
 			}
 		}
-		if reml {
-			gamma := -float64(float64(kap*(a+float64(b*(y[i]-r)))) * q)
-			if i < m-1 {
-				h := x[i+1] - x[i]
-				part.rough += float64(h / 3 * (float64(gamma*gamma) + float64(gamma*gammaNext) + float64(gammaNext*gammaNext)))
-			}
-			gammaNext = gamma
-		}
-		if i&(block-1) == 0 {
-			sum.add(&part)
-			part = sums{}
-		}
-		switch {
-		case i == m-1:
-			back = start(x[i]-x[i-1], w[i], y[i], q)
-		case i > 0:
-			back, _ = back.step(x[i]-x[i-1], w[i], y[i], q)
-		}
+		sum.edf += edf
+		sum.rest += restSum
+		sum.rss += rss
+		sum.loo += loo
+		sum.rough += rough
 	}
 	out.EDF = sum.edf
 	out.NEDF = sum.rest + float64(d.N-m)
@@ -201,7 +272,6 @@ func (ws *Workspace) evaluate(d *Data, lambda float64, reml bool) Criteria {
 	out.LOOCV = sum.loo / float64(d.N)
 	out.Roughness = sum.rough
 	if reml {
-		det.times(fw[m-1].lam + w[m-1])
 		ws.restricted(d, &out, &det)
 	}
 	return out
@@ -221,16 +291,8 @@ func combine(f, back *state, end bool) (j, n, kap, a, b float64) {
 	return j, n, kap, a, b
 }
 
-// sums are the partial sums of one block.
+// sums are what criteria are made of.
 type sums struct{ edf, rest, rss, loo, rough float64 }
-
-func (s *sums) add(p *sums) {
-	s.edf += p.edf
-	s.rest += p.rest
-	s.rss += p.rss
-	s.loo += p.loo
-	s.rough += p.rough
-}
 
 // logProduct is the logarithm of a long product: one Log at the end.
 type logProduct struct {

@@ -47,7 +47,7 @@ func (c *Curve) Piece(j int, x float64) (value, slope, curvature float64) {
 	h, u, v := x1-x0, x-x0, x1-x
 	p, o := u/h, v/h
 	value = float64(o*g0) + float64(p*g1) - float64(float64(u*v)/6*(float64((1+o)*c0)+float64((1+p)*c1)))
-	slope = (g1-g0)/h - float64((h/6-float64(u*p)/2)*c1) + float64((h/6-float64(v*o)/2)*c0)
+	slope = (g1-g0)/h - float64((h/6-float64(float64(u*p)/2))*c1) + float64((h/6-float64(float64(v*o)/2))*c0)
 	curvature = float64(o*c0) + float64(p*c1)
 	return value, slope, curvature
 }
@@ -80,15 +80,13 @@ func (ws *Workspace) FitInto(f *Fit, d *Data, lambda float64) {
 	f.Data = d
 	f.Knots = append(f.Knots[:0], d.X...)
 	f.forward = append(f.forward[:0], ws.forward[:m]...)
-	f.backward = grow(f.backward, m)
+	f.backward = append(f.backward[:0], ws.backward[:m]...)
 	f.Value, f.Curvature = grow(f.Value, m), grow(f.Curvature, m)
 	f.Leverage, f.Gap, f.info = grow(f.Leverage, m), grow(f.Gap, m), grow(f.info, m)
 	q := 1 / lambda
-	x, y, w := d.X, d.yc, d.W
-	back := state{}
-	for i := m - 1; i >= 0; i-- {
-		f.backward[i] = back
-		j, n, kap, a, b := combine(&f.forward[i], &back, i == 0 || i == m-1)
+	y, w := d.yc, d.W
+	for i := range f.Knots {
+		j, n, kap, a, b := combine(&f.forward[i], &f.backward[i], i == 0 || i == m-1)
 		rest := j / (w[i] + j)
 		r := float64(rest * (y[i] - n/j))
 		g := y[i] - r
@@ -97,12 +95,6 @@ func (ws *Workspace) FitInto(f *Fit, d *Data, lambda float64) {
 		f.Leverage[i] = w[i] / (w[i] + j)
 		f.Value[i] = g + d.shift
 		f.Curvature[i] = -float64(float64(kap*(a+float64(b*g))) * q)
-		switch {
-		case i == m-1:
-			back = start(x[i]-x[i-1], w[i], y[i], q)
-		case i > 0:
-			back, _ = back.step(x[i]-x[i-1], w[i], y[i], q)
-		}
 	}
 	f.Curvature[0], f.Curvature[m-1] = 0, 0
 }
