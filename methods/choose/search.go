@@ -12,11 +12,12 @@ import (
 
 // Of the search. Criteria are smooth in log lambda: sums of logistic curves,
 // whose nearest singularities lie at a distance of pi off the real axis. A
-// lattice of spacing 0.75 with a look between its points finds the minima that
-// a grid four times as fine finds, and a polynomial through nine points 0.05
-// apart has its root to about 1e-9.
+// lattice of spacing 1 with a look between its points and behind the bounds
+// missed no minimum of 9,000 simulated choices that a grid of 501 points finds
+// (TestNoBetterOnAFineGrid, at 3,000 seeds), and a polynomial through nine
+// points 0.05 apart has its root to about 1e-9.
 const (
-	spacing  = 0.75
+	spacing  = 1.0
 	stencil  = 4 // points on each side
 	fine     = 0.05
 	farthest = 600 // steps of the walk, each way
@@ -156,7 +157,7 @@ func (s *search) walk() error {
 func (s *search) bound(all []point, df float64) point {
 	for k := 0; k+1 < len(all); k++ {
 		if all[k].EDF >= df && all[k+1].EDF <= df {
-			return s.at(s.root(df, all[k].u, all[k].EDF, all[k+1].u, all[k+1].EDF, nearly))
+			return s.at(s.root(df, all[k].u, all[k].EDF, all[k+1].u, all[k+1].EDF, loosely))
 		}
 	}
 	// the walk ended before it: the data's range of edf ends here
@@ -168,7 +169,8 @@ func (s *search) bound(all []point, df float64) point {
 
 // How closely root settles edf, relative.
 const (
-	nearly  = 1e-9
+	loosely = 1e-4 // a bound that is not taken
+	nearly  = 1e-10
 	exactly = 1e-14
 )
 
@@ -317,13 +319,13 @@ func (s *search) minima() []point {
 			out = append(out, s.endMinimum(k))
 			continue
 		}
-		out = append(out, s.refine(l[k-1].u, l[k], l[k+1].u))
+		out = append(out, s.refine(l[k-1], l[k], l[k+1]))
 	}
 	return out
 }
 
 // endMinimum settles a minimum at an end of the range: a dip may stand just
-// inside it.
+// inside it, however shallow.
 func (s *search) endMinimum(k int) point {
 	l := s.lattice
 	inner := 1
@@ -331,28 +333,51 @@ func (s *search) endMinimum(k int) point {
 		inner = k - 1
 	}
 	mid := s.at(0.5 * (l[k].u + l[inner].u))
-	if mid.Score < l[k].Score {
-		lo, hi := min(l[k].u, l[inner].u), max(l[k].u, l[inner].u)
-		return s.refine(lo, mid, hi)
+	step := 0.02
+	if k > 0 {
+		step = -step
+	}
+	low, next := s.at(l[k].u+step), mid // is there a dip right behind the bound?
+	if mid.Score < low.Score {
+		low, next = mid, l[inner]
+	}
+	if low.Score < l[k].Score {
+		if k == 0 {
+			return s.refine(l[k], low, next)
+		}
+		return s.refine(next, low, l[k])
+	}
+	// the bound itself: settle its place
+	df := s.hi
+	if k > 0 {
+		df = s.lo
+	}
+	if end := l[k]; math.Abs(end.EDF-df) <= loosely*df && len(l) > 2 {
+		lo, hi := end.u-0.01, end.u+0.01
+		p := s.at(s.root(df, lo, s.edf(lo), hi, s.edf(hi), nearly))
+		p.end = end.end
+		s.lattice[k] = p
+		return p
 	}
 	return l[k]
 }
 
 // refine settles the minimum that p brackets within (a, b).
-func (s *search) refine(a float64, p point, b float64) point {
+func (s *search) refine(left, p, right point) point {
+	a, b := left.u, right.u
 	if s.rule.Name == REML {
 		return s.refineREML(a, p, b)
 	}
 	best := p
-	// A few parabolic steps first where the bracket is lopsided or wide.
-	fa, fb := s.score(a), s.score(b)
+	// A parabolic step or two first, for the bracket may be lopsided.
+	fa, fb := left.Score, right.Score
 	u, fu := p.u, p.Score
-	for range 3 {
+	for range 2 {
 		v := vertex(a, fa, u, fu, b, fb)
 		if !(v > a && v < b) {
 			break
 		}
-		if math.Abs(v-u) < 0.5*fine {
+		if math.Abs(v-u) < 1.5*fine {
 			u = v
 			break
 		}

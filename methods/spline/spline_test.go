@@ -86,7 +86,9 @@ func sample(n int, seed uint64) (x, y, w []float64) {
 	for range n {
 		v := math.Floor(float64(n)*rng.Float64()) / 4
 		x = append(x, v)
-		y = append(y, math.Sin(v/3)+0.2*rng.NormFloat64())
+		// no math.Sin: its bits differ between processors
+		bend := v - float64(n)/8
+		y = append(y, float64(bend*bend)/30+float64(2*rng.Float64()))
 		w = append(w, 0.5+math.Floor(4*rng.Float64())/2)
 	}
 	return x, y, w
@@ -160,7 +162,7 @@ func TestKnownBytes(t *testing.T) {
 			fmt.Fprintln(h, fingerprint(ws.Fit(d, lambda)))
 		}
 	}
-	const want, version = "299b64a20fa3f5d7f0bd317c66df8a1a", 1
+	const want, version = "5a1f8b8f6ec905ed9e3feef514d4d7a5", 1
 	got := hex.EncodeToString(h.Sum(nil))[:32]
 	switch {
 	case got != want && Version == version:
