@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"hash/fnv"
 	"math"
+	"runtime"
 	"sort"
 	"strconv"
 	"sync/atomic"
@@ -157,15 +158,22 @@ func openCurve(st *store.Store, c *spec.Curve, dig string, b []byte) (*curveFits
 		return nil, err
 	}
 	cf := &curveFits{def: c, digest: dig, count: m.Count, aside: m.Aside, zero: m.Zero, by: byNames(c)}
-	for _, p := range m.Parts {
-		obj, ok := st.Object(p)
-		if !ok {
-			return nil, fmt.Errorf("part %.12s of curve %q is no longer in the store", p, c.Name.Text)
-		}
-		var part storedPart
-		if err := cbor.Unmarshal(obj, &part); err != nil {
-			return nil, err
-		}
+	parts := make([]storedPart, len(m.Parts))
+	var eg errgroup.Group
+	eg.SetLimit(runtime.GOMAXPROCS(0))
+	for i, p := range m.Parts {
+		eg.Go(func() error {
+			obj, ok := st.Object(p)
+			if !ok {
+				return fmt.Errorf("part %.12s of curve %q is no longer in the store", p, c.Name.Text)
+			}
+			return cbor.Unmarshal(obj, &parts[i])
+		})
+	}
+	if err := eg.Wait(); err != nil {
+		return nil, err
+	}
+	for _, part := range parts {
 		for _, f := range part.Fits {
 			vs, err := parseValues(c, f.Group)
 			if err != nil {

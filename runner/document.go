@@ -306,7 +306,7 @@ func gridPoint(p reading.Point) reports.GridPoint {
 // evidence writes a choice as reports show it.
 func evidence(f *storedFit) reports.Evidence {
 	e := reports.Evidence{Criterion: criterion(f.Rule), Why: whyText(f)}
-	for _, c := range f.Candidates {
+	for _, c := range f.candidates() {
 		e.Candidates = append(e.Candidates, reports.Candidate{Lambda: c.Lambda, EDF: c.EDF, RSS: c.RSS, GCV: c.GCV, LOOCV: c.LOOCV, REML: c.REML, Score: c.Score})
 	}
 	for _, m := range f.Minima {

@@ -260,7 +260,7 @@ func gridCells(w *table.Writer, p reading.Point) {
 // or the chosen one, says so instead.
 func (x *exporter) evidence(w *table.Writer, k int) {
 	f := x.cf.fits[k]
-	for _, c := range f.Candidates {
+	for _, c := range f.candidates() {
 		role := "candidate"
 		for _, m := range f.Minima {
 			if m.Lambda == c.Lambda {

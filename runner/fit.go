@@ -18,28 +18,28 @@ import (
 // the choice with its evidence, and the curve. Bands and readings are taken
 // from it when they are asked for.
 type storedFit struct {
-	Group     []string  `cbor:"g"` // the by columns' values as text
-	Key       string    `cbor:"k"` // digest of all it depends on
-	N         int       `cbor:"n"`
-	Distinct  int       `cbor:"m"`
-	ZeroW     int       `cbor:"z,omitempty"`
-	X         []float64 `cbor:"x"` // rows in canonical order
-	Y         []float64 `cbor:"y"`
-	W         []float64 `cbor:"w,omitempty"` // absent: every row weighs 1
-	Rule      string    `cbor:"r"`
-	Exception string    `cbor:"e,omitempty"`
+	Group     []string `cbor:"g"` // the by columns' values as text
+	Key       string   `cbor:"k"` // digest of all it depends on
+	N         int      `cbor:"n"`
+	Distinct  int      `cbor:"m"`
+	ZeroW     int      `cbor:"z,omitempty"`
+	X         floats   `cbor:"x"` // rows in canonical order
+	Y         floats   `cbor:"y"`
+	W         floats   `cbor:"w,omitempty"` // absent: every row weighs 1
+	Rule      string   `cbor:"r"`
+	Exception string   `cbor:"e,omitempty"`
 
 	Lambda, EDF, NEDF, RSS, Sigma, GCV, LOOCV, REML, Score float64
 
-	Candidates []choose.Candidate `cbor:"c,omitempty"`
-	Minima     []choose.Minimum   `cbor:"mi,omitempty"`
-	Others     []choose.Other     `cbor:"o,omitempty"`
-	Flags      []string           `cbor:"f,omitempty"`
-	Residuals  diagnose.Report    `cbor:"d"`
+	Candidates floats           `cbor:"c,omitempty"`
+	Minima     []choose.Minimum `cbor:"mi,omitempty"`
+	Others     []choose.Other   `cbor:"o,omitempty"`
+	Flags      []string         `cbor:"f,omitempty"`
+	Residuals  diagnose.Report  `cbor:"d"`
 
-	Knots     []float64 `cbor:"kx,omitempty"`
-	Value     []float64 `cbor:"kv,omitempty"`
-	Curvature []float64 `cbor:"kc,omitempty"`
+	Knots     floats `cbor:"kx,omitempty"`
+	Value     floats `cbor:"kv,omitempty"`
+	Curvature floats `cbor:"kc,omitempty"`
 
 	Failed string `cbor:"no,omitempty"` // why there is no fit
 }
@@ -79,11 +79,11 @@ func chooseRule(s *spec.Study, r *spec.Rule, group string, block []int32) choose
 // is none; errors are the program's own.
 func (ft *fitter) compute(s *spec.Study, r *spec.Rule, out *storedFit, group string, block []int32) error {
 	d := &ft.data
-	out.X = append([]float64(nil), d.RowX...)
-	out.Y = append([]float64(nil), d.RowY...)
+	out.X = append(floats(nil), d.RowX...)
+	out.Y = append(floats(nil), d.RowY...)
 	for _, w := range d.RowW {
 		if w != 1 {
-			out.W = append([]float64(nil), d.RowW...)
+			out.W = append(floats(nil), d.RowW...)
 			break
 		}
 	}
@@ -99,13 +99,13 @@ func (ft *fitter) compute(s *spec.Study, r *spec.Rule, out *storedFit, group str
 	f := ft.ws.Fit(d, ev.Chosen.Lambda)
 	out.Lambda, out.EDF, out.NEDF, out.RSS, out.Sigma = f.Lambda, f.EDF, f.NEDF, f.RSS, f.Sigma()
 	out.GCV, out.LOOCV, out.REML, out.Score = f.GCV(1), f.LOOCV, f.REML, ev.Chosen.Score
-	out.Candidates, out.Minima = ev.Candidates, ev.Minima
+	out.Candidates, out.Minima = packCandidates(ev.Candidates), ev.Minima
 	out.Others = choose.Others(&ft.ws, d, rule, ev)
 	out.Residuals = diagnose.Residuals(f)
 	out.Flags = append(append([]string(nil), ev.Flags...), out.Residuals.Flags...)
-	out.Knots = append([]float64(nil), f.Knots...)
-	out.Value = append([]float64(nil), f.Value...)
-	out.Curvature = append([]float64(nil), f.Curvature...)
+	out.Knots = append(floats(nil), f.Knots...)
+	out.Value = append(floats(nil), f.Value...)
+	out.Curvature = append(floats(nil), f.Curvature...)
 	if bad := notFinite(out); bad != "" {
 		out.Failed = fmt.Sprintf("the fit's %s is not a finite number: the data's scale is beyond what can be fitted; rescale x, y or the weights", bad)
 	}

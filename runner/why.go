@@ -219,7 +219,7 @@ func (r *Recorded) Why(ctx context.Context, curve string, match []Match) (*Answe
 		a.Fit = reports.Fit{Name: fitName(curve, label(cf.by, f.Group)), Group: f.Group, N: f.N, Distinct: f.Distinct, Rule: f.Rule, Exception: f.Exception}
 		a.Skipped = cf.verdict[i].Why
 	}
-	a.Candidates = len(f.Candidates)
+	a.Candidates = len(f.candidates())
 	old, err := ledger.ReadCurve(ledgerDir(r.Study), curve)
 	if err != nil {
 		return nil, err

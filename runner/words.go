@@ -19,7 +19,7 @@ func whyText(f *storedFit) string {
 		return fmt.Sprintf("Lambda was fixed beforehand at %s, which gives %s.", table.FormatNumber(f.Lambda), edf)
 	}
 	lo, hi := span(f)
-	s := fmt.Sprintf("%s was computed at %s from edf %.2f to %.2f; ", criterion(f.Rule), plural(len(f.Candidates), "candidate", "candidates"), lo, hi)
+	s := fmt.Sprintf("%s was computed at %s from edf %.2f to %.2f; ", criterion(f.Rule), plural(len(f.candidates()), "candidate", "candidates"), lo, hi)
 	chosen, runner := -1, -1
 	for i, m := range f.Minima {
 		if m.Chosen {
@@ -59,7 +59,7 @@ func worse(f *storedFit, score float64) string {
 
 func span(f *storedFit) (lo, hi float64) {
 	lo, hi = math.Inf(1), math.Inf(-1)
-	for _, c := range f.Candidates {
+	for _, c := range f.candidates() {
 		lo, hi = min(lo, c.EDF), max(hi, c.EDF)
 	}
 	return lo, hi
