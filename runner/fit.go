@@ -149,7 +149,11 @@ func dataCause(err error) (string, bool) {
 // open makes the method's fit of a stored one again: the same rows at the
 // same lambda give the same bits.
 func (ft *fitter) open(f *storedFit) (*spline.Fit, error) {
-	if err := ft.data.Reset(f.X, f.Y, f.W); err != nil {
+	var w []float64 // nil: every row weighs 1
+	if len(f.W) > 0 {
+		w = f.W
+	}
+	if err := ft.data.Reset(f.X, f.Y, w); err != nil {
 		return nil, err
 	}
 	return ft.ws.Fit(&ft.data, f.Lambda), nil
