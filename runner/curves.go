@@ -30,6 +30,7 @@ type curveFits struct {
 	count   rowCount
 	aside   []setAside
 	zero    int
+	rows    []int // of each file of the input
 	fits    []*storedFit
 	values  [][]value // of fits[i]
 	by      []string
@@ -44,6 +45,7 @@ type manifest struct {
 	Count  rowCount
 	Aside  []setAside
 	Zero   int
+	Rows   []int // of each file of the input, in their order
 }
 
 // curveRun is what the curve stage needs.
@@ -115,6 +117,9 @@ func (r *curveRun) fit(ctx context.Context, c *spec.Curve) (*curveFits, error) {
 		return nil, err
 	}
 	m := manifest{Count: f.count, Aside: aside}
+	for _, file := range f.input.Files {
+		m.Rows = append(m.Rows, file.Rows)
+	}
 	for _, j := range jobs {
 		m.Parts = append(m.Parts, j.digest)
 		m.Number = append(m.Number, j.number)
@@ -147,7 +152,24 @@ func (r *curveRun) recall(c *spec.Curve, key string) *curveFits {
 	if err != nil {
 		return nil
 	}
+	files := r.files[inputOf(r.study, c.From)]
+	for i := range files {
+		if i < len(cf.rows) {
+			files[i].Rows = cf.rows[i]
+		}
+	}
 	return cf
+}
+
+// inputOf names the input that a table is made from.
+func inputOf(s *spec.Study, table string) string {
+	for {
+		r := s.RowsByName(table)
+		if r == nil {
+			return table
+		}
+		table = r.From
+	}
 }
 
 // openCurve reads a curve's fits by its manifest. An error means that some
@@ -157,7 +179,7 @@ func openCurve(st *store.Store, c *spec.Curve, dig string, b []byte) (*curveFits
 	if err := cbor.Unmarshal(b, &m); err != nil {
 		return nil, err
 	}
-	cf := &curveFits{def: c, digest: dig, count: m.Count, aside: m.Aside, zero: m.Zero, by: byNames(c)}
+	cf := &curveFits{def: c, digest: dig, count: m.Count, aside: m.Aside, zero: m.Zero, rows: m.Rows, by: byNames(c)}
 	parts := make([]storedPart, len(m.Parts))
 	var eg errgroup.Group
 	eg.SetLimit(runtime.GOMAXPROCS(0))
