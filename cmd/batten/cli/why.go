@@ -78,7 +78,7 @@ func (e *env) printWhy(a *runner.Answer) {
 	if c.Weight != "" {
 		weight = ", weighted by " + c.Weight
 	}
-	para("Rows: %d rows at %d distinct %s went into this fit: %s along %s%s. Of the curve's %d rows read, %d were used in all its groups.",
+	para("Rows: %d rows at %d distinct values of %s went into this fit: %s along %s%s. Of the curve's %d rows read, %d were used in all its groups.",
 		f.N, f.Distinct, c.X.Name, c.Y.Name, c.X.Name, weight, c.Rows.Read, c.Rows.Used)
 	for _, d := range c.Rows.Dropped {
 		para("  dropped %d (%s): %s", d.N, d.Label, d.Reason)
