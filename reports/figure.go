@@ -36,7 +36,7 @@ func frame(x, y Axis) *plot.Plot {
 		axis *plot.Axis
 		of   Axis
 	}{{&p.X, x}, {&p.Y, y}} {
-		a.axis.Label.Text = a.of.label()
+		a.axis.Label.Text = clip(a.of.label(), 70)
 		a.axis.Label.TextStyle.Font = font.From(sans, 8.5)
 		a.axis.Label.TextStyle.Color = ink("soft")
 		a.axis.Tick.Label.Font = font.From(sans, 8)
@@ -245,7 +245,7 @@ func finiteBand(g []GridPoint) bool {
 // note writes a short text beside a place.
 func note(c *draw.Canvas, at vg.Point, text, color string, align draw.XAlignment) {
 	st := draw.TextStyle{Color: ink(color), Font: font.From(sans, 8), Handler: plot.DefaultTextHandler, XAlign: align, YAlign: draw.YBottom}
-	c.FillText(st, at, text)
+	c.FillText(st, at, printable(text))
 }
 
 // textWidth is about how wide a note is.

@@ -64,11 +64,11 @@ func Terminal(w io.Writer, d *Document, opt TerminalOptions) {
 				fmt.Fprintf(w, "... and %d more groups without a curve\n", len(c.Skipped)-k)
 				break
 			}
-			word := "skipped"
+			word, on, off := "skipped", "", ""
 			if s.Refused {
-				word = alarm + "refused" + plain
+				word, on, off = "refused", alarm, plain
 			}
-			fmt.Fprintln(w, wrapText(fmt.Sprintf("%s %s: %s", word, printable(s.Group), s.Why), opt.Width, "    "))
+			fmt.Fprintln(w, on+wrapText(fmt.Sprintf("%s %s: %s", word, s.Group, s.Why), opt.Width, "    ")+off)
 		}
 	}
 	fmt.Fprintln(w)
@@ -82,7 +82,7 @@ func Terminal(w io.Writer, d *Document, opt TerminalOptions) {
 		if len(d.Summary.Moved) == 1 {
 			verb = "differs"
 		}
-		fmt.Fprintln(w, wrapText(fmt.Sprintf("%s%s %s from the ledger%s (%s):", alarm, plural(len(d.Summary.Moved), "fit", "fits"), verb, plain, d.Summary.Ledger), opt.Width, "  "))
+		fmt.Fprintln(w, alarm+wrapText(fmt.Sprintf("%s %s from the ledger (%s):", plural(len(d.Summary.Moved), "fit", "fits"), verb, d.Summary.Ledger), opt.Width, "  ")+plain)
 		g := movedTable(d.Summary.Moved)
 		rows := g.rows
 		if len(rows) > mostLines {
@@ -177,7 +177,7 @@ func terminalFits(w io.Writer, c *Curve, fits []*Fit, opt TerminalOptions, alarm
 		fmt.Fprintln(w, "* by an exception to the rule")
 	}
 	if len(notes) > 0 {
-		fmt.Fprintln(w, wrapText("flags: "+alarm+strings.Join(notes, ", ")+plain, opt.Width, "  "))
+		fmt.Fprintln(w, alarm+wrapText("flags: "+strings.Join(notes, ", "), opt.Width, "  ")+plain)
 	}
 	if len(omitted) > 0 {
 		fmt.Fprintln(w, wrapText("readings too wide for this table (see the report): "+strings.Join(omitted, ", "), opt.Width, "  "))
@@ -261,15 +261,16 @@ func oneLine(s string, most int) string {
 	return clip(strings.Join(strings.Fields(printable(s)), " "), most)
 }
 
-// wrapText breaks text at words; lines after the first begin with indent.
-// Escape codes for colour count as nothing.
+// wrapText breaks text at words; lines after the first begin with indent. What
+// a terminal would obey is taken out.
 func wrapText(s string, width int, indent string) string {
+	s = printable(s)
 	lead := s[:len(s)-len(strings.TrimLeft(s, " "))]
 	var b strings.Builder
 	b.WriteString(lead)
 	col := len(lead)
-	for i, word := range strings.FieldsFunc(s, func(r rune) bool { return r == ' ' || r == '\n' }) {
-		n := visible(word)
+	for i, word := range strings.FieldsFunc(s, func(r rune) bool { return r == ' ' }) {
+		n := len([]rune(word))
 		if i > 0 && col+1+n > width {
 			b.WriteString("\n" + indent)
 			col = len(indent)
@@ -281,21 +282,6 @@ func wrapText(s string, width int, indent string) string {
 		col += n
 	}
 	return b.String()
-}
-
-func visible(s string) int {
-	n, esc := 0, false
-	for _, r := range s {
-		switch {
-		case r == 0x1b:
-			esc = true
-		case esc:
-			esc = r != 'm'
-		default:
-			n++
-		}
-	}
-	return n
 }
 
 // ScorePlot draws score against edf in characters: o the choice, x other
