@@ -105,8 +105,15 @@ func summary(d *Document) []node {
 	case len(s.Moved) == 0:
 		return []node{para{text + "Nothing moved against the ledger (" + s.Ledger + ")."}}
 	}
-	out := []node{para{text + fmt.Sprintf("%s differ from the ledger (%s).", plural(len(s.Moved), "fit", "fits"), s.Ledger)}}
+	out := []node{para{text + differ(len(s.Moved)) + " from the ledger (" + s.Ledger + ")."}}
 	return append(out, movedTable(s.Moved))
+}
+
+func differ(n int) string {
+	if n == 1 {
+		return "1 fit differs"
+	}
+	return fmt.Sprintf("%d fits differ", n)
 }
 
 func movedTable(moved []Move) grid {

@@ -51,7 +51,7 @@ func frame(x, y Axis) *plot.Plot {
 }
 
 // ticks places few, round ticks; on a date axis at days, months or years.
-type ticks struct{ date, log bool }
+type ticks struct{ date bool }
 
 func (t ticks) Ticks(lo, hi float64) []plot.Tick {
 	if t.date {

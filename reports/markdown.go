@@ -124,7 +124,7 @@ func escape(s string) string {
 	if s != "" && strings.ContainsRune("-+#=", rune(s[0])) {
 		s = `\` + s
 	}
-	if i := strings.IndexAny(s, ".)"); i > 0 && strings.Trim(s[:i], "0123456789") == "" {
+	if i := strings.IndexAny(s, ".)"); i > 0 && strings.Trim(s[:i], "0123456789") == "" && (i+1 == len(s) || s[i+1] == ' ') {
 		s = s[:i] + `\` + s[i:]
 	}
 	return underscores(strings.ReplaceAll(s, "://", ":&#47;&#47;"))

@@ -25,7 +25,7 @@ func document() *Document {
 	c := Curve{
 		Name: "firmness", X: Axis{Name: "day", Unit: "d"}, Y: Axis{Name: "firmness", Unit: "N"}, By: []string{"cultivar", "store"},
 		Weight: "fruit", Rule: "gcv", Level: 0.95, BandFor: "the curve",
-		Rows: RowCount{Read: 30, Used: 24, ZeroWeight: 1, Dropped: []Count{{"bruised", "bruised fruit", 3}}, SetAside: []Count{{"firmness", "firmness is missing", 2}}},
+		Rows:       RowCount{Read: 30, Used: 24, ZeroWeight: 1, Dropped: []Count{{"bruised", "bruised fruit", 3}}, SetAside: []Count{{"firmness", "firmness is missing", 2}}},
 		Exceptions: []Exception{{"pilot", `cultivar == "Pilot"`, "fixed_df, df = 4", "four visits only", []string{"cultivar=B, store=air"}}},
 		Guards:     []Guard{{"enough", "n >= 8", "skip", "too few", []string{"cultivar=C, store=air"}}},
 		Readings:   []string{"release", "peak"},

@@ -58,7 +58,6 @@ type curveRun struct {
 	progress Progress
 	done     *atomic.Int64 // parts finished, over all curves
 	total    *atomic.Int64
-	read     func() // called once before rows are read
 }
 
 // fit brings one curve up to date: the whole curve from the store where
@@ -262,7 +261,6 @@ type job struct {
 	groups []group
 	text   [][]string // values of groups[i] as text
 	rules  []*spec.Rule
-	except []string
 	out    *storedPart
 	reused []bool // of groups[i]
 	digest string
