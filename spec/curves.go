@@ -42,7 +42,7 @@ func (r *reader) curve(b *block, name Name, kinds map[string]string) {
 	c.Along = pick(b.word("along", true, "a column"), expr.Number, expr.Date)
 	for _, n := range b.words("by", false, "columns") {
 		col := pick(n, expr.Text, expr.Number, expr.Date, expr.Bool)
-		if n.Text == c.Along.Name.Text || n.Text == c.Response.Name.Text {
+		if col.Kind != expr.Text && (n.Text == c.Along.Name.Text || n.Text == c.Response.Name.Text) {
 			r.fail(n.Range, fmt.Sprintf("grouping by %q, which the curve already uses", n.Text), "expected another column")
 		}
 		for _, o := range c.By {

@@ -63,7 +63,7 @@ func Parse(file, dir string, text []byte) (*Study, error) {
 		return nil, m
 	}
 	s.Text = body
-	r := &reader{study: s, consts: map[string]cty.Value{}}
+	r := &reader{study: s, consts: map[string]cty.Value{}, broken: map[string]bool{}}
 	r.mistakes.File, r.mistakes.Text = file, body
 	f, diags := hclsyntax.ParseConfig(body, file, hcl.InitialPos)
 	for _, d := range diags {
@@ -285,6 +285,7 @@ func (r *reader) lets(top *block) {
 				v = cty.NumberIntVal(0)
 			} else if t := v.Type(); t != cty.Number && t != cty.String && t != cty.Bool {
 				r.fail(a.Expr.Range(), describe(v), "expected a number, text or true and false")
+				v = cty.NumberIntVal(0)
 			}
 			r.consts[a.Name] = v
 		}

@@ -19,6 +19,7 @@ type reader struct {
 	study    *Study
 	mistakes Mistakes
 	consts   map[string]cty.Value
+	broken   map[string]bool // rows whose columns cannot be known: what uses them is not reported
 }
 
 func (r *reader) fail(at hcl.Range, found, expected string, a ...any) {

@@ -239,11 +239,14 @@ func (r *reader) rows(list []*hclsyntax.Block, names map[*hclsyntax.Block]Name, 
 		if src := byName[from.Text]; src != nil {
 			if state[from.Text] == 1 {
 				r.fail(from.Range, fmt.Sprintf("rows %q are made from themselves", n.Text), "expected a chain of rows that starts at an input; this one comes back by way of %q", from.Text)
+				r.broken[n.Text], r.broken[from.Text] = true, true
 			} else if f := read(src); f != nil {
 				out.Columns = append([]Column(nil), f.Columns...)
+				r.broken[n.Text] = r.broken[n.Text] || r.broken[from.Text]
 			}
 		} else {
 			out.Columns = append([]Column(nil), r.tableColumns(from, kinds)...)
+			r.broken[n.Text] = len(out.Columns) == 0
 		}
 		r.steps(b, out)
 		state[n.Text] = 2
@@ -265,6 +268,9 @@ func (r *reader) tableColumns(from Name, kinds map[string]string) []Column {
 		return in.Columns
 	}
 	if rows := r.study.RowsByName(from.Text); rows != nil {
+		if r.broken[from.Text] {
+			return nil
+		}
 		return rows.Columns
 	}
 	var all []string
@@ -304,7 +310,7 @@ func (r *reader) steps(b *block, out *Rows) {
 			if _, dup := cols[n.Text]; dup {
 				r.fail(n.Range, fmt.Sprintf("the column %q is there already", n.Text), "expected a new name")
 			}
-			if len(cols) > 0 || s.attrs["value"] == nil {
+			if !r.broken[out.Name.Text] || s.attrs["value"] == nil {
 				st.Add = s.program("value", true, cols, 0)
 			}
 			s.take("value", false)
@@ -319,7 +325,7 @@ func (r *reader) steps(b *block, out *Rows) {
 			r.shadows([]Column{c})
 			out.Columns = append(out.Columns, c)
 		} else {
-			if len(cols) > 0 || s.attrs["when"] == nil {
+			if !r.broken[out.Name.Text] || s.attrs["when"] == nil {
 				st.When = s.program("when", true, cols, expr.Bool)
 			}
 			s.take("when", false)

@@ -150,6 +150,8 @@ func (c *compiler) expr(e hclsyntax.Expression, depth int) (node, bool) {
 		}
 		v, _ := e.Value(nil)
 		return c.value(v, e.SrcRange)
+	case *hclsyntax.TemplateWrapExpr:
+		return c.fail(e.SrcRange, "text with ${...} in it", "expected plain text; write the name without quotes and ${}")
 	case *hclsyntax.ScopeTraversalExpr:
 		return c.name(e)
 	case *hclsyntax.UnaryOpExpr:
