@@ -5,6 +5,7 @@ import (
 	"crypto/sha256"
 	"encoding/hex"
 	"fmt"
+	"math"
 	"os"
 	"path/filepath"
 	"strings"
@@ -286,6 +287,11 @@ func (r *reader) lets(top *block) {
 			} else if t := v.Type(); t != cty.Number && t != cty.String && t != cty.Bool {
 				r.fail(a.Expr.Range(), describe(v), "expected a number, text or true and false")
 				v = cty.NumberIntVal(0)
+			} else if t == cty.Number {
+				if f, _ := v.AsBigFloat().Float64(); math.IsInf(f, 0) {
+					r.fail(a.Expr.Range(), "a number beyond 1e308", "expected a number that a double can hold")
+					v = cty.NumberIntVal(0)
+				}
 			}
 			r.consts[a.Name] = v
 		}
