@@ -261,4 +261,3 @@ func (e *env) printWhyJSON(a *runner.Answer) error {
 // isFigure tells whether an output is a figure of a report: there may be
 // hundreds, so their names are not printed.
 func isFigure(path string) bool { return strings.HasSuffix(path, ".svg") }
-
