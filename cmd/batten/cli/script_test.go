@@ -5,6 +5,7 @@ import (
 	"context"
 	"io/fs"
 	"os"
+	"os/signal"
 	"path/filepath"
 	"strconv"
 	"strings"
@@ -18,7 +19,10 @@ const top = "../../.."
 func TestMain(m *testing.M) {
 	testscript.Main(m, map[string]func(){
 		"batten": func() {
-			os.Exit(Run(context.Background(), os.Args[1:], os.Stdin, os.Stdout, os.Stderr))
+			ctx, stop := signal.NotifyContext(context.Background(), os.Interrupt)
+			code := Run(ctx, os.Args[1:], os.Stdin, os.Stdout, os.Stderr)
+			stop()
+			os.Exit(code)
 		},
 	})
 }

@@ -1,0 +1,203 @@
+package cli
+
+import (
+	"fmt"
+	"io/fs"
+	"math/rand/v2"
+	"os"
+	"os/exec"
+	"path/filepath"
+	"runtime"
+	"strings"
+	"testing"
+	"time"
+)
+
+// command makes a real process of this program: the test binary answers to
+// the name batten.
+func command(args ...string) *exec.Cmd {
+	exe, err := os.Executable()
+	if err != nil {
+		panic(err)
+	}
+	return &exec.Cmd{Path: exe, Args: append([]string{"batten"}, args...)}
+}
+
+// slowStudy takes a moment: many groups under a resampled rule.
+func slowStudy(t *testing.T) string {
+	t.Helper()
+	dir := t.TempDir()
+	var b strings.Builder
+	b.WriteString("g,x,y\n")
+	rng := rand.New(rand.NewPCG(4, 4))
+	for g := range 60 {
+		for i := range 40 {
+			fmt.Fprintf(&b, "g%02d,%d,%.3f\n", g, i, float64((i-g)*(i-g))/100+rng.NormFloat64())
+		}
+	}
+	spec := `study { title = "Killed (invented)" }
+input "d" {
+  file    = "d.csv"
+  columns = { g = text, x = number, y = number }
+}
+curve "c" {
+  from     = d
+  response = y
+  along    = x
+  by       = [g]
+  smoothness {
+    rule  = kfold
+    folds = 5
+  }
+}
+export "grid" {
+  of   = c
+  what = grid
+  file = "out/grid.csv"
+}
+export "evidence" {
+  of   = c
+  what = evidence
+  file = "out/evidence.csv"
+}
+`
+	for name, text := range map[string]string{"d.csv": b.String(), "study.hcl": spec} {
+		if err := os.WriteFile(filepath.Join(dir, name), []byte(text), 0o666); err != nil {
+			t.Fatal(err)
+		}
+	}
+	return dir
+}
+
+func outputsOf(t *testing.T, dir string) string {
+	t.Helper()
+	var all strings.Builder
+	for _, f := range []string{"grid.csv", "evidence.csv"} {
+		b, err := os.ReadFile(filepath.Join(dir, "out", f))
+		if err != nil {
+			t.Fatal(err)
+		}
+		all.Write(b)
+	}
+	return all.String()
+}
+
+// TestKilled kills a run at a random moment, again and again: the next run
+// ends with the bytes of an undisturbed one, and no output is ever half
+// written.
+func TestKilled(t *testing.T) {
+	if runtime.GOOS == "windows" {
+		t.Skip("a killed process is another thing there")
+	}
+	dir := slowStudy(t)
+	start := time.Now()
+	if out, err := command("run", dir, "-q").CombinedOutput(); err != nil {
+		t.Fatalf("%v: %s", err, out)
+	}
+	took := time.Since(start)
+	want := outputsOf(t, dir)
+	rng := rand.New(rand.NewPCG(9, 9))
+	killed := 0
+	for range 15 {
+		for _, sub := range []string{"out", ".batten"} {
+			if rng.IntN(2) == 0 {
+				if err := os.RemoveAll(filepath.Join(dir, sub)); err != nil {
+					t.Fatal(err)
+				}
+			}
+		}
+		c := command("run", dir, "-q")
+		if err := c.Start(); err != nil {
+			t.Fatal(err)
+		}
+		time.Sleep(time.Duration(rng.Float64() * float64(took)))
+		_ = c.Process.Kill()
+		if err := c.Wait(); err != nil {
+			killed++
+		}
+		for _, f := range []string{"grid.csv", "evidence.csv"} {
+			if b, err := os.ReadFile(filepath.Join(dir, "out", f)); err == nil && !strings.Contains(want, string(b)) {
+				t.Fatalf("%s is half written after a kill", f)
+			}
+		}
+		if out, err := command("run", dir, "-q").CombinedOutput(); err != nil {
+			t.Fatalf("after a kill: %v: %s", err, out)
+		}
+		if outputsOf(t, dir) != want {
+			t.Fatal("after a kill the outputs differ")
+		}
+	}
+	if killed < 5 {
+		t.Errorf("only %d of 15 runs were killed before they ended", killed)
+	}
+	_ = filepath.WalkDir(filepath.Join(dir, ".batten"), func(p string, d fs.DirEntry, err error) error {
+		if err == nil && strings.HasPrefix(d.Name(), "tmp-") {
+			t.Errorf("left behind: %s", p)
+		}
+		return nil
+	})
+}
+
+// TestTwoAtOnce runs a study twice at the same time: both end well, with the
+// same outputs and a record each.
+func TestTwoAtOnce(t *testing.T) {
+	dir := slowStudy(t)
+	var cs []*exec.Cmd
+	for range 3 {
+		c := command("run", dir, "-q")
+		if err := c.Start(); err != nil {
+			t.Fatal(err)
+		}
+		cs = append(cs, c)
+	}
+	for _, c := range cs {
+		if err := c.Wait(); err != nil {
+			t.Error(err)
+		}
+	}
+	runs, err := os.ReadDir(filepath.Join(dir, ".batten", "runs"))
+	if err != nil || len(runs) != 3 {
+		t.Errorf("%d records, %v", len(runs), err)
+	}
+	first := outputsOf(t, dir)
+	if err := os.RemoveAll(filepath.Join(dir, ".batten")); err != nil {
+		t.Fatal(err)
+	}
+	if out, err := command("run", dir, "-q").CombinedOutput(); err != nil {
+		t.Fatalf("%v: %s", err, out)
+	}
+	if outputsOf(t, dir) != first {
+		t.Error("runs side by side gave other bytes")
+	}
+}
+
+// TestInterrupted: Ctrl-C ends a run cleanly, and what is done is kept.
+func TestInterrupted(t *testing.T) {
+	if runtime.GOOS == "windows" {
+		t.Skip("there is no SIGINT for a child process")
+	}
+	dir := slowStudy(t)
+	c := command("run", dir)
+	var errs strings.Builder
+	c.Stderr = &errs
+	if err := c.Start(); err != nil {
+		t.Fatal(err)
+	}
+	for range 400 { // until fitting has begun
+		if objs, _ := filepath.Glob(filepath.Join(dir, ".batten/objects/*/*")); len(objs) > 2 {
+			break
+		}
+		time.Sleep(2 * time.Millisecond)
+	}
+	_ = c.Process.Signal(os.Interrupt)
+	err := c.Wait()
+	if err == nil {
+		t.Skip("the run ended before it could be interrupted")
+	}
+	if c.ProcessState.ExitCode() != Failed || !strings.Contains(errs.String(), "are done and kept") {
+		t.Errorf("exit status %d: %s", c.ProcessState.ExitCode(), errs.String())
+	}
+	if _, err := os.Stat(filepath.Join(dir, "out")); err == nil {
+		t.Error("an interrupted run wrote outputs")
+	}
+}
