@@ -82,10 +82,45 @@ func (r *Run) writeOutputs(ctx context.Context, st *store.Store) error {
 	return nil
 }
 
+// standing takes the digests of the exports that stand already, while the
+// fits are recalled: in a rerun without changes both take as long.
+type standing map[string]chan stood
+
+type stood struct {
+	sum   string
+	bytes int64
+	err   error
+}
+
+func (r *Run) digestExports() {
+	r.standing = standing{}
+	for _, e := range r.Study.Exports {
+		r.standing[e.File] = make(chan stood, 1)
+	}
+	go func() {
+		for _, e := range r.Study.Exports {
+			var s stood
+			s.sum, s.bytes, s.err = r.digestOf(e.File)
+			r.standing[e.File] <- s
+		}
+	}()
+}
+
+// digestOf is the digest of an output as it stands.
+func (r *Run) digestOf(path string) (string, int64, error) {
+	return fileDigest(filepath.Join(r.Study.Dir, filepath.FromSlash(path)))
+}
+
 // write brings one file up to date.
 func (r *Run) write(st *store.Store, o out) error {
 	if b, _, ok := st.Get(o.key); ok {
-		if sum, n, err := fileDigest(filepath.Join(r.Study.Dir, filepath.FromSlash(o.path))); err == nil && sum == string(b) {
+		var s stood
+		if c := r.standing[o.path]; c != nil {
+			s = <-c
+		} else {
+			s.sum, s.bytes, s.err = r.digestOf(o.path)
+		}
+		if sum, n, err := s.sum, s.bytes, s.err; err == nil && sum == string(b) {
 			r.Record.Outputs = append(r.Record.Outputs, Output{o.path, sum, n, false})
 			return nil
 		}
@@ -224,7 +259,7 @@ func (r *Run) allStand(st *store.Store, key, file string, figures []string) bool
 		if !ok {
 			return false
 		}
-		sum, n, err := fileDigest(filepath.Join(r.Study.Dir, filepath.FromSlash(name)))
+		sum, n, err := r.digestOf(name)
 		found = append(found, Output{name, sum, n, false})
 		return err == nil && sum == string(want)
 	}

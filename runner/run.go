@@ -63,6 +63,8 @@ type Run struct {
 	state  *ledger.State
 	tables *tables
 	opt    Options
+
+	standing standing
 }
 
 // Execute runs a study. On a *RefusedError the Run is returned beside it:
@@ -87,6 +89,13 @@ func Execute(ctx context.Context, s *spec.Study, opt Options) (*Run, error) {
 		return nil, err
 	}
 	r.tables = &tables{study: s, workers: opt.Workers, frames: map[string]*frame{}}
+	known := true
+	for _, c := range s.Curves {
+		known = known && st.Has(curveKey(s, c, r.files).String())
+	}
+	if known {
+		r.digestExports()
+	}
 	var done, total atomic.Int64
 	for _, c := range s.Curves {
 		cr := &curveRun{study: s, store: st, files: r.files, tables: r.tables, workers: opt.Workers,

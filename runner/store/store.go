@@ -196,6 +196,12 @@ func (s *Store) Get(key string) (object []byte, digest string, ok bool) {
 	return object, digest, ok
 }
 
+// Has tells whether a key is there; what it leads to may still be damaged.
+func (s *Store) Has(key string) bool {
+	_, err := os.Stat(s.key(key))
+	return err == nil
+}
+
 // Object returns the object of that digest, if it is there and sound.
 func (s *Store) Object(digest string) ([]byte, bool) {
 	if !isDigest(digest) {
