@@ -61,41 +61,38 @@ func cause(err error) error {
 	return err
 }
 
-// Open opens the store in dir, making it where there is none. A store of an
-// older format is emptied.
+// Open opens the store in dir for reading. It writes nothing: what is not
+// there is a miss, and only a newer store is an error.
 func Open(dir string) (*Store, error) {
 	s := &Store{dir: dir}
-	b, err := os.ReadFile(filepath.Join(dir, "format"))
-	if err == nil {
-		n, perr := strconv.Atoi(strings.TrimSpace(string(b)))
-		switch {
-		case perr == nil && n > Format:
-			return nil, &NewerError{dir, n, Format}
-		case perr == nil && n == Format:
-			return s, nil
-		}
-		for _, sub := range []string{"objects", "keys", "slots"} {
-			if err := os.RemoveAll(filepath.Join(dir, sub)); err != nil {
-				return nil, &UnwritableError{dir, err}
-			}
-		}
-	}
-	if err := os.MkdirAll(dir, 0o777); err != nil {
-		return nil, &UnwritableError{dir, err}
-	}
-	// The store need not be kept: git is told so by the store itself.
-	if err := s.write(filepath.Join(dir, ".gitignore"), []byte("*\n")); err != nil {
-		return nil, err
-	}
-	if err := s.write(filepath.Join(dir, "format"), []byte(strconv.Itoa(Format)+"\n")); err != nil {
-		return nil, err
-	}
-	return s, nil
+	_, err := s.format()
+	return s, err
 }
 
-// Lock takes the study's one write lock, waiting for it; note is told once if
-// it has to wait. A lock dies with its process.
+// format reads the store's format; 0 where there is none or none that can be
+// read.
+func (s *Store) format() (int, error) {
+	b, err := os.ReadFile(filepath.Join(s.dir, "format"))
+	if err != nil {
+		return 0, nil
+	}
+	n, err := strconv.Atoi(strings.TrimSpace(string(b)))
+	switch {
+	case err != nil || n < 0:
+		return 0, nil
+	case n > Format:
+		return n, &NewerError{s.dir, n, Format}
+	}
+	return n, nil
+}
+
+// Lock takes the study's one write lock, waiting for it, and makes the store
+// ready to be written; note is told once if it has to wait. A lock dies with
+// its process.
 func (s *Store) Lock(ctx context.Context, note func(string)) (unlock func(), err error) {
+	if err := os.MkdirAll(s.dir, 0o777); err != nil {
+		return nil, &UnwritableError{s.dir, err}
+	}
 	l := flock.New(filepath.Join(s.dir, "lock"))
 	ok, err := l.TryLock()
 	if err != nil {
@@ -109,8 +106,35 @@ func (s *Store) Lock(ctx context.Context, note func(string)) (unlock func(), err
 			return nil, fmt.Errorf("gave up waiting for another run of this study: %w", err)
 		}
 	}
-	s.clean()
+	if err := s.prepare(); err != nil {
+		_ = l.Unlock()
+		return nil, err
+	}
 	return func() { _ = l.Unlock() }, nil
+}
+
+// prepare makes the store where there is none, empties one of an older format
+// and removes what a killed process left. The caller holds the lock: without
+// it one run would clear away what another is writing.
+func (s *Store) prepare() error {
+	n, err := s.format()
+	if err != nil {
+		return err
+	}
+	s.clean()
+	if n == Format {
+		return nil
+	}
+	for _, sub := range []string{"objects", "keys", "slots"} {
+		if err := os.RemoveAll(filepath.Join(s.dir, sub)); err != nil {
+			return &UnwritableError{s.dir, err}
+		}
+	}
+	// The store need not be kept: git is told so by the store itself.
+	if err := s.write(filepath.Join(s.dir, ".gitignore"), []byte("*\n")); err != nil {
+		return err
+	}
+	return s.write(filepath.Join(s.dir, "format"), []byte(strconv.Itoa(Format)+"\n"))
 }
 
 // clean removes temporary files that a killed process left. The caller holds

@@ -123,9 +123,11 @@ func TestFormats(t *testing.T) {
 	if err := os.WriteFile(filepath.Join(dir, "format"), []byte("junk"), 0o666); err != nil {
 		t.Fatal(err)
 	}
-	if s = open(t, dir); s == nil {
-		t.Fatal("no store")
+	unlock, err := open(t, dir).Lock(context.Background(), nil)
+	if err != nil {
+		t.Fatal(err)
 	}
+	unlock()
 	if _, _, ok := s.Get("k"); ok {
 		t.Error("an object of an unknown format was kept")
 	}
