@@ -119,42 +119,20 @@ func (x *exporter) write(ctx context.Context, out io.Writer, workers int) error 
 		done[i] = make(chan []byte, 1)
 	}
 	eg, ctx := errgroup.WithContext(ctx)
-	next := make(chan int)
 	free := make(chan struct{}, 4*max(1, workers)) // how far formatting may run ahead of writing
-	eg.Go(func() error {
-		defer close(next)
-		for i := range n {
-			select {
-			case free <- struct{}{}:
-			case <-ctx.Done():
-				return ctx.Err()
+	overBlocks(ctx, eg, n, workers, free, func(ft *fitter, i int) error {
+		w := &table.Writer{SafeCells: true}
+		for k := i * block; k < min((i+1)*block, len(x.cf.fits)); k++ {
+			if !x.cf.verdict[k].fits() {
+				continue
 			}
-			select {
-			case next <- i:
-			case <-ctx.Done():
-				return ctx.Err()
+			if err := x.fit(ft, w, k); err != nil {
+				return err
 			}
 		}
+		done[i] <- w.Bytes()
 		return nil
 	})
-	for range max(1, workers) {
-		eg.Go(func() error {
-			ft := &fitter{}
-			for i := range next {
-				w := &table.Writer{SafeCells: true}
-				for k := i * block; k < min((i+1)*block, len(x.cf.fits)); k++ {
-					if !x.cf.verdict[k].fits() {
-						continue
-					}
-					if err := x.fit(ft, w, k); err != nil {
-						return err
-					}
-				}
-				done[i] <- w.Bytes()
-			}
-			return nil
-		})
-	}
 	eg.Go(func() error {
 		for i := range n {
 			select {

@@ -7,8 +7,6 @@ import (
 	"slices"
 	"strings"
 
-	"golang.org/x/sync/errgroup"
-
 	"batten/runner/ledger"
 	"batten/spec"
 )
@@ -79,41 +77,6 @@ func entries(ctx context.Context, cf *curveFits, workers int) ([]ledger.Entry, e
 		}
 	}
 	return standing, nil
-}
-
-// eachFit calls do for every standing fit, in parallel.
-func eachFit(ctx context.Context, cf *curveFits, workers int, do func(*fitter, int) error) error {
-	eg, ctx := errgroup.WithContext(ctx)
-	const block = 32
-	next := make(chan int)
-	eg.Go(func() error {
-		defer close(next)
-		for i := 0; i < len(cf.fits); i += block {
-			select {
-			case next <- i:
-			case <-ctx.Done():
-				return ctx.Err()
-			}
-		}
-		return nil
-	})
-	for range max(1, workers) {
-		eg.Go(func() error {
-			ft := &fitter{}
-			for lo := range next {
-				for i := lo; i < min(lo+block, len(cf.fits)); i++ {
-					if !cf.verdict[i].fits() {
-						continue
-					}
-					if err := do(ft, i); err != nil {
-						return err
-					}
-				}
-			}
-			return nil
-		})
-	}
-	return eg.Wait()
 }
 
 // moved compares a curve's fits with the ledger's, in the order of groups;

@@ -4,7 +4,8 @@ import "math"
 
 // The functions of expressions give the same bits on every processor: they
 // round each product explicitly, so that none is fused into a sum, and do not
-// call Go's Log and Exp, which are assembly on some.
+// call Go's Log and Exp, which are assembly on some. methods/elementary has a
+// pair of its own: spec and methods do not import each other.
 
 const (
 	ln2Hi = 6.93147180369123816490e-01

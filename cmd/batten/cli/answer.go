@@ -95,15 +95,7 @@ func (e *env) read() *cobra.Command {
   batten read study.hcl trend --at 2026-03-01`,
 		Args: cobra.MinimumNArgs(2),
 		RunE: func(c *cobra.Command, args []string) error {
-			s, err := load(args[0])
-			if err != nil {
-				return err
-			}
-			match, err := matches(args[2:])
-			if err != nil {
-				return err
-			}
-			rec, err := runner.Reopen(s, run)
+			rec, match, err := reopen(args, run)
 			if err != nil {
 				return err
 			}

@@ -210,3 +210,18 @@ func matches(args []string) ([]runner.Match, error) {
 	}
 	return out, nil
 }
+
+// reopen loads the study and a recorded run of it for a command whose
+// arguments are STUDY CURVE [col=value ...].
+func reopen(args []string, run string) (*runner.Recorded, []runner.Match, error) {
+	s, err := load(args[0])
+	if err != nil {
+		return nil, nil, err
+	}
+	match, err := matches(args[2:])
+	if err != nil {
+		return nil, nil, err
+	}
+	r, err := runner.Reopen(s, run)
+	return r, match, err
+}

@@ -23,15 +23,7 @@ record and the store under .batten, not the data.`,
 		Example: `  batten why study.hcl firmness cultivar=Aroma store=air`,
 		Args:    cobra.MinimumNArgs(2),
 		RunE: func(c *cobra.Command, args []string) error {
-			s, err := load(args[0])
-			if err != nil {
-				return err
-			}
-			match, err := matches(args[2:])
-			if err != nil {
-				return err
-			}
-			rec, err := runner.Reopen(s, run)
+			rec, match, err := reopen(args, run)
 			if err != nil {
 				return err
 			}
