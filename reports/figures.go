@@ -245,6 +245,9 @@ func residualFigure(c *Curve, f *Fit, t theme) []byte {
 	p.Add(dots(f.Points, func(q Point) float64 { return q.Residual }, 1.8))
 	p.Add(line([]float64{p.X.Min, p.X.Max}, []float64{0, 0}, "curve", 0.9))
 	room(p)
+	if c.X.Date { // their labels are wide
+		p.X.Tick.Marker = few{p.X.Tick.Marker}
+	}
 	return render(p, smallW, smallH, "Residuals of "+f.Name, fmt.Sprintf("Residuals of %d rows against %s, with the zero line.", f.N, c.X.Name), t)
 }
 

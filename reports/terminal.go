@@ -200,7 +200,8 @@ func Table(w io.Writer, header []string, rows [][]string, notes []string, width 
 		if naturalWidth(header, rows) > width {
 			wrapMode, most = tw.WrapNormal, max(width, 20)
 		}
-		t := tablewriter.NewTable(w,
+		var buf strings.Builder
+		t := tablewriter.NewTable(&buf,
 			tablewriter.WithRenderer(renderer.NewBlueprint(tw.Rendition{
 				Borders:  tw.BorderNone,
 				Symbols:  tw.NewSymbols(tw.StyleLight),
@@ -225,6 +226,9 @@ func Table(w io.Writer, header []string, rows [][]string, notes []string, width 
 			_ = t.Append(clean(r))
 		}
 		_ = t.Render()
+		for l := range strings.Lines(buf.String()) {
+			fmt.Fprintln(w, strings.TrimRight(l, " \n"))
+		}
 	}
 	for _, n := range notes {
 		fmt.Fprintln(w, wrapText(n, width, "  "))
