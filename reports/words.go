@@ -6,7 +6,10 @@ var ruleWords = []struct{ rule, text string }{
 	{"fixed_lambda", "fixed_lambda: lambda was written down beforehand, on the scale of x, y and the weights as they are."},
 	{"gcv", "gcv: generalised cross-validation, n RSS / (n − edf)². It stands for the error of predicting a row from the others. It may undersmooth small groups, and does so where errors are serially dependent."},
 	{"loocv", "loocv: leave-one-out cross-validation, the mean weighted squared error of predicting each row from all the others."},
-	{"kfold", "kfold: rows, or whole blocks of them, are held out in turn and predicted from the rest; the mean weighted squared error is made smallest. Blocks guard against serial dependence within them."},
+	{"kfold", "kfold: rows, or whole blocks of them, are held out in turn and predicted from the rest; the mean weighted squared error is made smallest. Blocks, or stretches of neighbours with a gap about them, guard against serial dependence; of stretches only rows between fitted rows are scored."},
+	{"aicc", "aicc: the Akaike criterion with its correction for small n. It is close to gcv, and undersmooths less often in small groups."},
+	{"known_sigma", "known_sigma: the unbiased estimate of the curve's mean squared error where the standard deviation of a row is known beforehand. It is as good as that sigma."},
+	{"residual_target", "residual_target: the smoothest curve whose RSS does not exceed n sigma², for a sigma known beforehand. It tends to be smoother than the others."},
 	{"reml", "reml: restricted maximum likelihood of the curve as a random function with a straight line as its fixed part. It seldom undersmooths, and has fewer false minima than cross-validation."},
 }
 

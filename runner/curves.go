@@ -79,33 +79,17 @@ func (r *curveRun) fit(ctx context.Context, c *spec.Curve) (*curveFits, error) {
 	r.progress.Start(c.Name.Text, len(groups))
 
 	w := newWeighing(c, f)
-	eg, ectx := errgroup.WithContext(ctx)
-	next := make(chan *job)
-	eg.Go(func() error {
-		defer close(next)
-		for _, j := range jobs {
-			select {
-			case next <- j:
-			case <-ectx.Done():
-				return ectx.Err()
+	shared, err := r.share(ctx, c, w, jobs)
+	if err == nil {
+		err = r.eachJob(ctx, jobs, func(ft *fitter, j *job) error {
+			if err := r.part(ft, c, w, j, shared); err != nil {
+				return err
 			}
-		}
-		return nil
-	})
-	for range max(1, min(r.workers, len(jobs))) {
-		eg.Go(func() error {
-			ft := &fitter{}
-			for j := range next {
-				if err := r.part(ft, c, w, j); err != nil {
-					return err
-				}
-				r.done.Add(1)
-				r.progress.Add(len(j.groups))
-			}
+			r.done.Add(1)
+			r.progress.Add(len(j.groups))
 			return nil
 		})
 	}
-	err = eg.Wait()
 	r.progress.Stop()
 	if err != nil {
 		if ctx.Err() != nil {
@@ -137,6 +121,13 @@ func (r *curveRun) fit(ctx context.Context, c *spec.Curve) (*curveFits, error) {
 		return nil, err
 	}
 	return cf, nil
+}
+
+// eachJob hands the jobs to the workers.
+func (r *curveRun) eachJob(ctx context.Context, jobs []*job, do func(*fitter, *job) error) error {
+	eg, ctx := errgroup.WithContext(ctx)
+	overBlocks(ctx, eg, len(jobs), min(r.workers, len(jobs)), nil, func(ft *fitter, k int) error { return do(ft, jobs[k]) })
+	return eg.Wait()
 }
 
 // recall returns a curve that the store holds whole, or nil.

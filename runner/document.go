@@ -223,6 +223,14 @@ func ruleText(r *spec.Rule) string {
 	if r.Block != nil {
 		s += ", block = " + r.Block.Name.Text
 	}
+	if r.Stretches {
+		s += ", stretches = true"
+	}
+	num("gap", r.Gap)
+	num("sigma", r.Sigma)
+	if r.Shared != "" {
+		s += ", shared = " + r.Shared
+	}
 	if r.OneSE {
 		s += ", one_se = true"
 	}
@@ -325,6 +333,12 @@ func criterion(rule string) string {
 		return "cross-validation"
 	case spec.REML:
 		return "REML"
+	case spec.AICc:
+		return "AICc"
+	case spec.KnownSigma:
+		return "unbiased risk"
+	case spec.ResidualTarget:
+		return "RSS / n"
 	}
 	return ""
 }

@@ -29,6 +29,10 @@ type storedFit struct {
 	Rule      string   `cbor:"r"`
 	Exception string   `cbor:"e,omitempty"`
 
+	Shared      string  `cbor:"sh,omitempty"` // what the groups have in common: lambda or edf
+	SharedValue float64 `cbor:"sv,omitempty"` // log lambda, or edf
+	SharedBy    int     `cbor:"sn,omitempty"` // by how many groups
+
 	Lambda, EDF, NEDF, RSS, Sigma, GCV, LOOCV, REML, Score float64
 
 	Candidates floats           `cbor:"c,omitempty"`
@@ -67,10 +71,11 @@ type fitter struct {
 }
 
 // rule returns the method's form of a spec's rule.
-func chooseRule(s *spec.Study, r *spec.Rule, group string, block []int32) choose.Rule {
+func chooseRule(s *spec.Study, r *spec.Rule, group string, block []int32, shared float64) choose.Rule {
 	return choose.Rule{
+		Follow: r.Shared, Shared: shared,
 		Name: r.Name, DF: r.DF, Lambda: r.Lambda, Inflate: r.Inflate,
-		Folds: r.Folds, Block: block, OneSE: r.OneSE,
+		Folds: r.Folds, Block: block, Stretches: r.Stretches, Gap: r.Gap, OneSE: r.OneSE, Sigma: r.Sigma,
 		DFAtLeast: r.DFAtLeast, DFAtMost: r.DFAtMost, Seed: s.Seed, Group: group,
 	}
 }
@@ -87,7 +92,7 @@ func (ft *fitter) compute(s *spec.Study, r *spec.Rule, out *storedFit, group str
 			break
 		}
 	}
-	rule := chooseRule(s, r, group, block)
+	rule := chooseRule(s, r, group, block, out.SharedValue)
 	ev, err := choose.Lambda(&ft.ws, d, rule)
 	if err != nil {
 		if why, ok := dataCause(err); ok {

@@ -68,6 +68,9 @@ func form(c *spec.Curve, f *frame, study *spec.Study) ([]group, []setAside, erro
 	if c.Weight != nil {
 		needed = append(needed, c.Weight.Name.Text)
 	}
+	if c.Sigma != nil {
+		needed = append(needed, c.Sigma.Name.Text)
+	}
 	for _, b := range blocks(c) {
 		needed = append(needed, b.Name.Text)
 	}
@@ -94,7 +97,14 @@ func form(c *spec.Curve, f *frame, study *spec.Study) ([]group, []setAside, erro
 		}
 	}
 	if c.Weight != nil {
-		if err := negativeWeights(c, f, keep, study); err != nil {
+		err := holdTo(c.Weight, c, f, keep, study, func(w float64) bool { return w >= 0 }, "weight %q is negative (%s), expected 0 or more")
+		if err != nil {
+			return nil, nil, err
+		}
+	}
+	if c.Sigma != nil {
+		err := holdTo(c.Sigma, c, f, keep, study, func(s float64) bool { return s > 0 && usable(1/float64(s*s)) }, "standard deviation %q is %s, expected more than 0")
+		if err != nil {
 			return nil, nil, err
 		}
 	}
@@ -202,11 +212,16 @@ func valueAt(c *expr.Column, i int) value {
 	}
 }
 
-func negativeWeights(c *spec.Curve, f *frame, keep []bool, study *spec.Study) error {
+// usable tells whether a weight is an ordinary positive number.
+func usable(w float64) bool { return w > 0 && !math.IsInf(w, 1) }
+
+// holdTo makes sure that a column's values are what weights can be made of;
+// what says how they fail, given the column's name and the value.
+func holdTo(col *spec.Column, c *spec.Curve, f *frame, keep []bool, study *spec.Study, good func(float64) bool, what string) error {
 	var out DataError
-	name := c.Weight.Name
-	for i, w := range f.cols[name.Text].Num {
-		if !keep[i] || w >= 0 {
+	name := col.Name
+	for i, v := range f.cols[name.Text].Num {
+		if !keep[i] || good(v) {
 			continue
 		}
 		if len(out.Problems) >= problemCap {
@@ -215,8 +230,8 @@ func negativeWeights(c *spec.Curve, f *frame, keep []bool, study *spec.Study) er
 		}
 		path, line := f.place(i)
 		out.Problems = append(out.Problems, fmt.Sprintf(
-			"%s:%d: weight %q is negative (%s), expected 0 or more; mend the row or drop it with a reason (curve %q, %s)",
-			path, line, name.Text, table.FormatNumber(w), c.Name.Text, at(study, name.Range.Start.Line, name.Range.Start.Column)))
+			"%s:%d: "+what+"; mend the row or drop it with a reason (curve %q, %s)",
+			path, line, name.Text, table.FormatNumber(v), c.Name.Text, at(study, name.Range.Start.Line, name.Range.Start.Column)))
 	}
 	if len(out.Problems) > 0 {
 		return &out

@@ -124,6 +124,9 @@ func curveKey(s *spec.Study, c *spec.Curve, files map[string][]table.File) *key 
 	if c.Weight != nil {
 		k.add("weight", c.Weight.Name.Text)
 	}
+	if c.Sigma != nil {
+		k.add("sigma", c.Sigma.Name.Text)
+	}
 	for _, e := range c.Exceptions {
 		k.add("only", e.Name.Text, e.Only.Key())
 		ruleLines(k, s, &e.Rule)
@@ -135,19 +138,19 @@ func curveKey(s *spec.Study, c *spec.Curve, files map[string][]table.File) *key 
 
 // ruleLines describes a smoothness rule.
 func ruleLines(k *key, s *spec.Study, r *spec.Rule) {
-	k.add("rule", r.Name, r.DF, r.Lambda, r.Inflate, r.DFAtLeast, r.DFAtMost)
+	k.add("rule", r.Name, r.DF, r.Lambda, r.Inflate, r.Sigma, r.DFAtLeast, r.DFAtMost, r.OneSE, r.Shared)
 	if r.Name == spec.KFold {
 		block := ""
 		if r.Block != nil {
 			block = r.Block.Name.Text
 		}
-		k.add("folds", r.Folds, block, r.OneSE)
+		k.add("folds", r.Folds, block, r.Stretches, r.Gap)
 		k.add("seed", s.Seed)
 	}
 }
 
 // groupKey is the digest of all that one group's fit depends on.
-func groupKey(s *spec.Study, r *spec.Rule, exception, group string, d *spline.Data, block []int32) string {
+func groupKey(s *spec.Study, r *spec.Rule, exception, group string, d *spline.Data, block []int32, shared float64) string {
 	k := newKey("fit", objectVersion)
 	methodLines(k)
 	ruleLines(k, s, r)
@@ -155,6 +158,7 @@ func groupKey(s *spec.Study, r *spec.Rule, exception, group string, d *spline.Da
 	if r.Name == spec.KFold {
 		k.add("group", group)
 	}
+	k.add("shared", shared)
 	k.add("rows", d.N, d.ZeroWeight)
 	h := sha256.New()
 	hashFloats(h, d.RowX)

@@ -63,6 +63,12 @@ func newWeighing(c *spec.Curve, f *frame) *weighing {
 	if c.Weight != nil {
 		w.w = f.cols[c.Weight.Name.Text].Num
 	}
+	if c.Sigma != nil {
+		w.w = make([]float64, f.n)
+		for i, s := range f.cols[c.Sigma.Name.Text].Num {
+			w.w[i] = 1 / float64(s*s)
+		}
+	}
 	for _, b := range blocks(c) {
 		w.block[b.Name.Text] = ranks(f.cols[b.Name.Text])
 	}
@@ -113,7 +119,7 @@ func rerank(b []int32) {
 }
 
 // part brings one part up to date.
-func (r *curveRun) part(ft *fitter, c *spec.Curve, w *weighing, j *job) error {
+func (r *curveRun) part(ft *fitter, c *spec.Curve, w *weighing, j *job, shared map[*spec.Rule]sharedChoice) error {
 	by := byNames(c)
 	j.reused = make([]bool, len(j.groups))
 	keys := make([]string, len(j.groups))
@@ -124,7 +130,7 @@ func (r *curveRun) part(ft *fitter, c *spec.Curve, w *weighing, j *job) error {
 		pk.add("by", b)
 	}
 	for i := range j.groups {
-		f, rule, err := r.describe(ft, c, w, j, i)
+		f, rule, err := r.describe(ft, c, w, j, i, shared)
 		if err != nil {
 			return err
 		}
@@ -197,7 +203,7 @@ func (r *curveRun) load(ft *fitter, c *spec.Curve, w *weighing, j *job, i int, r
 }
 
 // describe settles a group's rule and key.
-func (r *curveRun) describe(ft *fitter, c *spec.Curve, w *weighing, j *job, i int) (*storedFit, *spec.Rule, error) {
+func (r *curveRun) describe(ft *fitter, c *spec.Curve, w *weighing, j *job, i int, shared map[*spec.Rule]sharedChoice) (*storedFit, *spec.Rule, error) {
 	out := &storedFit{Group: j.text[i]}
 	_, err := r.load(ft, c, w, j, i, nil)
 	why := ""
@@ -217,8 +223,14 @@ func (r *curveRun) describe(ft *fitter, c *spec.Curve, w *weighing, j *job, i in
 		}
 	}
 	group := label(byNames(c), j.text[i])
-	out.Key = groupKey(r.study, rule, exception, group, &ft.data, block)
 	out.Failed = why
+	if ch, ok := shared[rule]; ok && why == "" {
+		if ch.Groups == 0 {
+			out.Failed = fmt.Sprintf("the groups under this rule leave no %s that suits all of them", rule.Shared)
+		}
+		out.Shared, out.SharedValue, out.SharedBy = rule.Shared, ch.Value, ch.Groups
+	}
+	out.Key = groupKey(r.study, rule, exception, group, &ft.data, block, out.SharedValue)
 	return out, rule, nil
 }
 

@@ -156,8 +156,10 @@ func outputs(t testing.TB, dir string) map[string]string {
 // store holds, or (but for lines and digests of files) on the order of rows
 // and files.
 func TestSameBytes(t *testing.T) {
-	rows := rowsOf(9, 40)
-	for _, rule := range []string{"gcv", "reml", "kfold\n    folds = 5", "kfold\n    block = lot"} {
+	rows := rowsOf(5, 30)
+	for _, rule := range []string{"gcv", "reml", "aicc", "kfold\n    folds = 5", "kfold\n    block = lot",
+		"kfold\n    folds = 6\n    stretches = true\n    gap = 0.5", "loocv\n    one_se = true", "known_sigma\n    sigma = 0.4",
+		"residual_target\n    sigma = 0.5", "gcv\n    shared = true", "reml\n    shared = edf"} {
 		dir := write(t, rule, map[string][]string{"d.csv": rows})
 		execute(t, dir, 1)
 		want := outputs(t, dir)

@@ -3,8 +3,10 @@ package runner
 import (
 	"fmt"
 	"math"
+	"slices"
 	"strings"
 
+	"batten/methods/choose"
 	"batten/runner/table"
 	"batten/spec"
 )
@@ -19,7 +21,18 @@ func whyText(f *storedFit) string {
 		return fmt.Sprintf("Lambda was fixed beforehand at %s, which gives %s.", table.FormatNumber(f.Lambda), edf)
 	}
 	lo, hi := span(f)
-	s := fmt.Sprintf("%s was computed at %s from edf %.2f to %.2f; ", criterion(f.Rule), plural(len(f.candidates()), "candidate", "candidates"), lo, hi)
+	if f.Rule == spec.ResidualTarget {
+		s := fmt.Sprintf("RSS was computed at %s from edf %.2f to %.2f; ", plural(len(f.candidates()), "candidate", "candidates"), lo, hi)
+		if slices.Contains(f.Flags, choose.TargetUnreached) {
+			return s + fmt.Sprintf("no curve comes as near the rows as n sigma² asks, and the roughest was taken, %s.", edf)
+		}
+		return s + fmt.Sprintf("%s is the smoothest whose RSS / n, %.4g, does not exceed sigma².", edf, f.Score)
+	}
+	if f.Shared != "" {
+		return fmt.Sprintf("One %s is shared by %s: the sum of their %s is smallest there. This group has %s.",
+			f.Shared, plural(f.SharedBy, "group", "groups"), criterion(f.Rule), edf)
+	}
+	s := fmt.Sprintf("%s was computed at %s from edf %.2f to %.2f; ", capital(criterion(f.Rule)), plural(len(f.candidates()), "candidate", "candidates"), lo, hi)
 	chosen, runner := -1, -1
 	for i, m := range f.Minima {
 		if m.Chosen {
@@ -48,7 +61,10 @@ func whyText(f *storedFit) string {
 // worse says how far a score lies above the chosen one. REML is a log
 // likelihood: differences count, not ratios.
 func worse(f *storedFit, score float64) string {
-	if f.Rule == spec.REML {
+	switch f.Rule {
+	case spec.AICc:
+		return fmt.Sprintf(", %.3g higher", score-f.Score)
+	case spec.REML:
 		return fmt.Sprintf(", %.3g worse in −2 log likelihood", score-f.Score)
 	}
 	if f.Score > 0 {
@@ -70,12 +86,14 @@ func flagText(name string, v verdict) string {
 	switch name {
 	case "at_bound":
 		return "The criterion is smallest at an end of the searched range, so the bound and not the data set the smoothness. Look at the curve; widen or narrow df_at_least and df_at_most on purpose, or use another rule."
+	case choose.TargetUnreached:
+		return "No curve in the searched range comes as near the rows as the stated sigma says. Sigma may be too small, or tied rows alone spread further; check it before relying on the curve."
 	case "straight_line":
 		return "The rule chose a straight line, or nearly so: the scatter hides any bend. That is a result; more readings or less scatter would be needed to see a bend."
 	case "several_minima":
 		return "Two or more minima score within 1% of each other: the data do not settle between a smoother and a wigglier curve. Compare them before relying on detail; df_at_most or reml would settle it by rule."
 	case "autocorrelated":
-		return "Neighbouring residuals resemble each other. Either the curve is too stiff, or the errors are serially dependent; then gcv and loocv undersmooth and bands are too narrow. Consider k-fold over blocks."
+		return "Neighbouring residuals resemble each other. Either the curve is too stiff, or the errors are serially dependent; then gcv and loocv undersmooth and bands are too narrow. Consider kfold over blocks or over stretches, with a gap."
 	case "high_leverage":
 		return "Some rows all but fix the curve where they stand. Check these rows: an error in one of them would go straight into the curve."
 	case "few_distinct":
@@ -87,4 +105,12 @@ func flagText(name string, v verdict) string {
 		return fmt.Sprintf("The guard %q warns: its condition does not hold for this fit.", g)
 	}
 	return name
+}
+
+// capital begins a sentence.
+func capital(s string) string {
+	if s == "" {
+		return s
+	}
+	return strings.ToUpper(s[:1]) + s[1:]
 }

@@ -105,7 +105,7 @@ func (r *reader) smoothness(b *block, c *Curve, cols []Column) {
 		case only != nil:
 			r.fail(s.at, "an exception without a name", "expected smoothness \"name\" { only = ... }, so that the record can name it")
 		}
-		rule := r.rule(s, cols)
+		rule := r.rule(s, c, cols)
 		if only != nil || len(k.Labels) > 0 {
 			e := Exception{Name: name, Rule: rule}
 			e.Only = s.program("only", false, groupCols, expr.Bool)
@@ -131,19 +131,23 @@ func (r *reader) smoothness(b *block, c *Curve, cols []Column) {
 	}
 }
 
-var ruleNames = []string{FixedDF, FixedLambda, GCV, LOOCV, KFold, REML}
+var ruleNames = []string{FixedDF, FixedLambda, GCV, LOOCV, KFold, REML, AICc, KnownSigma, ResidualTarget}
 
 // settings are the arguments that belong to each rule.
 var settings = map[string][]string{
 	FixedDF:     {"df"},
 	FixedLambda: {"lambda"},
-	GCV:         {"inflate", "df_at_least", "df_at_most"},
-	LOOCV:       {"df_at_least", "df_at_most"},
-	KFold:       {"folds", "block", "one_se", "df_at_least", "df_at_most"},
-	REML:        {"df_at_least", "df_at_most"},
+	GCV:         {"inflate", "shared", "df_at_least", "df_at_most"},
+	LOOCV:       {"one_se", "shared", "df_at_least", "df_at_most"},
+	KFold:       {"folds", "block", "stretches", "gap", "one_se", "shared", "df_at_least", "df_at_most"},
+	REML:        {"shared", "df_at_least", "df_at_most"},
+	AICc:        {"shared", "df_at_least", "df_at_most"},
+
+	KnownSigma:     {"sigma", "shared", "df_at_least", "df_at_most"},
+	ResidualTarget: {"sigma", "df_at_least", "df_at_most"},
 }
 
-func (r *reader) rule(b *block, cols []Column) Rule {
+func (r *reader) rule(b *block, c *Curve, cols []Column) Rule {
 	out := Rule{Inflate: 1, Range: b.at}
 	n := b.word("rule", true, "a rule: "+strings.Join(ruleNames, ", "))
 	out.Name = n.Text
@@ -159,6 +163,16 @@ func (r *reader) rule(b *block, cols []Column) Rule {
 			}
 		}
 	}
+	if known && slices.Contains(belongs, "sigma") {
+		r.sigma(b, c, cols, &out)
+	} else {
+		b.take("sigma", false)
+	}
+	out.Shared = r.shared(b)
+	if out.Stretches = b.flag("stretches"); out.Stretches && b.attrs["block"] != nil {
+		r.fail(b.attrs["stretches"].NameRange, "stretches beside block", "expected one of them: folds are stretches of neighbours in x, or whole block values")
+	}
+	out.Gap, _ = b.number("gap", false, 0, math.MaxFloat64, "a distance along x of 0 or more")
 	inf := math.MaxFloat64
 	out.DF, _ = b.number("df", n.Text == FixedDF, 2, inf, "degrees of freedom of 2 (a straight line) or more")
 	out.Lambda, _ = b.number("lambda", n.Text == FixedLambda, 5e-324, inf, "a lambda above 0")
@@ -173,13 +187,82 @@ func (r *reader) rule(b *block, cols []Column) Rule {
 			out.Block = &blockCol
 		}
 	}
-	out.OneSE = b.flag("one_se")
+	if out.OneSE = b.flag("one_se"); out.OneSE && out.Shared != "" {
+		r.fail(b.attrs["one_se"].NameRange, "one_se beside shared", "expected one of them")
+	}
 	out.DFAtLeast, _ = b.number("df_at_least", false, 2, inf, "degrees of freedom of 2 or more")
 	out.DFAtMost, _ = b.number("df_at_most", false, 2, inf, "degrees of freedom of 2 or more")
 	if out.DFAtMost > 0 && out.DFAtMost <= max(out.DFAtLeast, 2.01) {
 		r.fail(b.attrs["df_at_most"].Expr.Range(), fmt.Sprintf("df_at_most = %g", out.DFAtMost), "expected more than df_at_least (%g where it is not given)", max(out.DFAtLeast, 2.01))
 	}
 	return out
+}
+
+// sigma reads the known standard deviation of a row: a number, of a row of
+// weight 1, or a column, which then settles the weights.
+func (r *reader) sigma(b *block, c *Curve, cols []Column, out *Rule) {
+	a := b.take("sigma", true)
+	if a == nil {
+		return
+	}
+	t, bare := a.Expr.(*hclsyntax.ScopeTraversalExpr)
+	if _, constant := r.consts[rootName(t)]; !bare || constant {
+		v, ok := r.numberOf(a.Expr, "a standard deviation as a number above 0, or a column of them")
+		if ok && !(v > 0) {
+			r.fail(a.Expr.Range(), fmt.Sprintf("sigma = %g", v), "expected more than 0")
+		}
+		out.Sigma = v
+		return
+	}
+	n, ok := r.wordOf(a.Expr, "a number or a column")
+	if !ok {
+		return
+	}
+	x := r.column(n, cols)
+	if x == nil {
+		return
+	}
+	switch {
+	case x.Kind != expr.Number:
+		r.fail(n.Range, fmt.Sprintf("the column %q is %s", n.Text, x.Kind), "expected number")
+	case c.Weight != nil:
+		r.fail(n.Range, fmt.Sprintf("sigma = %s beside a weight", n.Text), "expected one of them: with a column of standard deviations every row weighs 1/sigma^2")
+	case c.Sigma != nil && c.Sigma.Name.Text != n.Text:
+		r.fail(n.Range, fmt.Sprintf("a second column of sigma, %q beside %q", n.Text, c.Sigma.Name.Text), "expected the same one in all rules of a curve, for it settles the weights")
+	default:
+		col := *x
+		col.Name.Range = n.Range
+		c.Sigma = &col
+	}
+	out.Sigma = 1
+}
+
+func rootName(t *hclsyntax.ScopeTraversalExpr) string {
+	if t == nil {
+		return ""
+	}
+	return t.Traversal.RootName()
+}
+
+// shared reads what the groups share: true stands for lambda.
+func (r *reader) shared(b *block) string {
+	a := b.take("shared", false)
+	if a == nil {
+		return ""
+	}
+	if l, ok := a.Expr.(*hclsyntax.LiteralValueExpr); ok {
+		switch describe(l.Val) {
+		case "true":
+			return SharedLambda
+		case "false":
+			return ""
+		}
+	}
+	n, ok := r.wordOf(a.Expr, "true, lambda or edf")
+	if ok && n.Text != SharedLambda && n.Text != SharedEDF {
+		r.fail(n.Range, fmt.Sprintf("shared = %s", n.Text), "expected true, lambda or edf%s", expr.Suggest(n.Text, []string{SharedLambda, SharedEDF}))
+	}
+	return n.Text
 }
 
 func (r *reader) band(b *block, out *Band) {

@@ -89,12 +89,18 @@
 //	rule = fixed_df      df = NUMBER >= 2
 //	rule = fixed_lambda  lambda = NUMBER > 0, on the original scale of x, y, weights
 //	rule = gcv           inflate = NUMBER, default 1
-//	rule = loocv
-//	rule = kfold         folds = WHOLE (default 10, or one a block value), block = COLUMN, one_se = BOOL
+//	rule = loocv         one_se = BOOL
+//	rule = kfold         folds = WHOLE (default 10, or one a block value), block = COLUMN or
+//	                     stretches = BOOL, gap = NUMBER along x, one_se = BOOL
 //	rule = reml
+//	rule = aicc
+//	rule = known_sigma   sigma = NUMBER, of a row of weight 1, or COLUMN: a row then weighs 1/sigma^2
+//	rule = residual_target   sigma: as above; the smoothest curve with RSS <= n sigma^2
 //
-// and gcv, loocv, kfold and reml take df_at_least (default 2.01) and df_at_most
-// (default 0.9 times the distinct x).
+// and all but the fixed ones take df_at_least (default 2.01) and df_at_most
+// (default 0.9 times the distinct x); all but the fixed ones and
+// residual_target take shared = true (or lambda) or edf: one for all groups
+// that follow the rule, by the sum of their scores.
 //
 //	contrast "NAME" {
 //	  of     = CURVE             required

@@ -87,6 +87,7 @@ type Curve struct {
 	Along    Column   // Number or Date
 	By       []Column // may be empty: one group
 	Weight   *Column  // nil: every row weighs 1
+	Sigma    *Column  // of a rule with sigma = COLUMN: a row weighs 1/sigma^2; never beside Weight
 
 	Rule       Rule        // the rule without `only`
 	Exceptions []Exception // in the order of the file; the first that holds wins
@@ -105,6 +106,16 @@ const (
 	LOOCV       = "loocv"
 	KFold       = "kfold"
 	REML        = "reml"
+	AICc        = "aicc"
+
+	KnownSigma     = "known_sigma"
+	ResidualTarget = "residual_target"
+)
+
+// What the groups of a rule share, for Rule.Shared.
+const (
+	SharedLambda = "lambda"
+	SharedEDF    = "edf"
 )
 
 // Rule is a smoothness rule with its settings.
@@ -115,7 +126,11 @@ type Rule struct {
 	Inflate   float64 // gcv; 1 where not given
 	Folds     int     // kfold; 0 where not given and Block is set: one fold a block value
 	Block     *Column // kfold; nil: folds over rows
-	OneSE     bool    // kfold
+	Stretches bool    // kfold: folds are neighbours in x
+	Gap       float64 // kfold: in the unit of x
+	OneSE     bool    // kfold, loocv
+	Sigma     float64 // known_sigma, residual_target; 1 where the curve has a Sigma column
+	Shared    string  // "", SharedLambda or SharedEDF: one for all groups that follow the rule
 	DFAtLeast float64 // 0: the default 2.01
 	DFAtMost  float64 // 0: the default 0.9 times the distinct x
 	Range     hcl.Range

@@ -26,12 +26,23 @@ const (
 	LOOCV       = "loocv"
 	KFold       = "kfold"
 	REML        = "reml"
+	AICc        = "aicc"
+
+	// KnownSigma minimises the unbiased risk at a stated sigma; ResidualTarget
+	// takes the smoothest curve whose RSS does not exceed n sigma^2.
+	KnownSigma     = "known_sigma"
+	ResidualTarget = "residual_target"
 )
+
+// Compared are the rules that evidence always tells of, whatever was chosen.
+var Compared = []string{GCV, LOOCV, REML, AICc}
 
 // Bounds of the search where a rule sets none.
 const (
-	LeastDF   = 2.01
-	MostShare = 0.9 // of the distinct x
+	LeastDF   = 2 + leastAbove // order 2
+	MostShare = 0.9            // of the distinct x
+
+	leastAbove = 0.01 // above the edf of the null space
 )
 
 // Rule is a smoothness rule with its settings; those of other rules are
@@ -41,11 +52,16 @@ type Rule struct {
 	DF        float64 // fixed_df: edf wanted, from 2 (the straight line) to below the distinct x
 	Lambda    float64 // fixed_lambda
 	Inflate   float64 // gcv: the factor on edf; 0 means 1
+	Sigma     float64 // known_sigma, residual_target: of a reading of weight 1
 	Folds     int     // kfold; 0 with Block: one fold a block value
 	Block     []int32 // kfold: block of each of the caller's rows; nil: rows are drawn
-	OneSE     bool    // kfold: the smoothest candidate within one standard error of the best
+	Stretches bool    // kfold: folds are stretches of neighbours in x, not drawn
+	Gap       float64 // kfold: rows this near (in x) to a held-out row do not train its fold
+	OneSE     bool    // kfold, loocv: the smoothest candidate within one standard error of the best
 	DFAtLeast float64 // 0: LeastDF
 	DFAtMost  float64 // 0: MostShare of the distinct x
+	Follow    string  // SharedLambda, SharedEDF: take Shared, which the groups have in common
+	Shared    float64 // log lambda, or edf
 	Seed      int64   // kfold
 	Group     string  // kfold: the group's name, which the draw depends on
 }
@@ -72,6 +88,8 @@ const (
 	AtBound       = "at_bound"       // the minimum is an end of the range
 	StraightLine  = "straight_line"  // the choice is a straight line, or nearly so
 	SeveralMinima = "several_minima" // minima that score within 1% of each other
+
+	TargetUnreached = "target_unreached" // residual_target: no curve in the range comes as near the data as sigma says
 )
 
 // Evidence is the record of one choice.
@@ -109,63 +127,83 @@ func Lambda(ws *spline.Workspace, d *spline.Data, r Rule) (*Evidence, error) {
 		}
 		return s.fixed(r.Lambda), nil
 	case FixedDF:
-		m := len(d.X)
-		if r.DF < 2 {
-			return nil, fmt.Errorf("df = %g, expected 2 or more", r.DF)
+		m, null := len(d.X), float64(d.Null())
+		if r.DF < null {
+			return nil, fmt.Errorf("df = %g, expected %g or more", r.DF, null)
 		}
 		if r.DF >= float64(m) {
 			return nil, RangeError{fmt.Sprintf("df = %g needs more than %g distinct x, there are %d", r.DF, r.DF, m)}
 		}
-		if r.DF == 2 {
+		if r.DF == null {
 			return s.fixed(math.Inf(1)), nil
 		}
 		return s.fixed(s.solve(r.DF, exactly)), nil
-	case GCV, LOOCV, REML:
-		return s.automatic()
+	case GCV, LOOCV, REML, AICc:
+		return s.minimum()
+	case KnownSigma, ResidualTarget:
+		if !(r.Sigma > 0) {
+			return nil, fmt.Errorf("sigma = %g, expected more than 0", r.Sigma)
+		}
+		if r.Name == ResidualTarget {
+			return s.target()
+		}
+		return s.minimum()
 	case KFold:
 		if err := s.drawFolds(); err != nil {
 			return nil, err
 		}
-		return s.automatic()
+		return s.minimum()
 	}
 	return nil, fmt.Errorf("unknown rule %q", r.Name)
+}
+
+// minimum takes the group's own minimum, or what it shares with others.
+func (s *search) minimum() (*Evidence, error) {
+	if s.rule.Follow != "" {
+		return s.follow()
+	}
+	return s.automatic()
 }
 
 // fixed records a lambda that no criterion chose. The score of such a rule is
 // its GCV, for comparison only.
 func (s *search) fixed(lambda float64) *Evidence {
-	c := s.candidate(lambda)
-	c.Score = c.GCV
+	c := s.atLambda(lambda).Candidate
 	e := &Evidence{Rule: s.rule.Name, Chosen: c, Candidates: []Candidate{c}}
-	if c.EDF <= LeastDF+1e-3 {
-		e.Flags = append(e.Flags, StraightLine)
-	}
+	e.Flags = s.endFlags(c, "")
 	return e
 }
 
-// Others returns what gcv, loocv and reml would have taken, over their default
-// range of edf. It uses e's candidates as a lattice where they cover it.
+// Others returns what the rules of Compared would have taken, over their
+// default range of edf. It uses e's candidates as a lattice where they cover
+// it.
 func Others(ws *spline.Workspace, d *spline.Data, r Rule, e *Evidence) []Other {
 	var out []Other
 	var shared []point
-	plain := r.Name != FixedDF && r.Name != FixedLambda && r.DFAtLeast == 0 && r.DFAtMost == 0 && (r.Inflate == 0 || r.Inflate == 1)
-	for _, name := range []string{GCV, LOOCV, REML} {
-		if plain && name == r.Name {
+	covers := len(e.Candidates) > 4 && r.DFAtLeast == 0 && r.DFAtMost == 0 && !(r.Inflate > 1) && r.Name != AICc && r.Name != ResidualTarget
+	same := covers && !r.OneSE && r.Follow == ""
+	for _, name := range Compared {
+		if same && name == r.Name {
 			out = append(out, Other{name, e.Chosen.Lambda, e.Chosen.EDF, e.Chosen.Score})
 			continue
 		}
 		s := newSearch(ws, d, Rule{Name: name})
 		if shared == nil {
-			if plain && len(e.Candidates) > 4 {
+			if covers {
 				shared = pointsOf(e.Candidates)
 			} else if err := s.walk(); err == nil {
 				shared = s.lattice
 			} else {
-				return nil
+				continue // too few rows for this rule; another may do
 			}
 		}
-		s.adopt(shared)
-		best := s.best(s.minima())
+		if !s.adopt(shared) {
+			continue
+		}
+		best := s.lattice[len(s.lattice)-1]
+		if !s.perfect() {
+			best = s.best(s.minima(true))
+		}
 		out = append(out, Other{name, best.Lambda, best.EDF, best.Score})
 	}
 	return out

@@ -58,6 +58,27 @@ func TestPublishedChoices(t *testing.T) {
 	e = mustChoose(t, cars, Rule{Name: FixedDF, DF: 4})
 	near(t, "cars, df 4, lambda", e.Chosen.Lambda, 92.87129, 1e-7)
 	near(t, "edf", e.Chosen.EDF, 4, 1e-13)
+	e = mustChoose(t, cars, Rule{Name: AICc})
+	near(t, "cars, aicc, lambda", e.Chosen.Lambda, 1457.3, 4e-5)
+	near(t, "edf", e.Chosen.EDF, 2.50323, 3e-6)
+	e = mustChoose(t, cars, Rule{Name: KnownSigma, Sigma: 15})
+	near(t, "cars, sigma 15, lambda", e.Chosen.Lambda, 953.23, 1e-5)
+	near(t, "edf", e.Chosen.EDF, 2.66725, 3e-6)
+	e = mustChoose(t, cars, Rule{Name: ResidualTarget, Sigma: 15})
+	near(t, "cars, RSS = 50 x 225, lambda", e.Chosen.Lambda, 7473.078, 1e-7)
+	near(t, "edf", e.Chosen.EDF, 2.131474, 3e-7)
+	near(t, "RSS", e.Chosen.RSS, 50*225, 1e-12)
+	e = mustChoose(t, load(t, "nhtemp"), Rule{Name: AICc})
+	var low []float64
+	for _, m := range e.Minima {
+		low = append(low, m.EDF)
+	}
+	slices.Sort(low)
+	if len(low) != 2 {
+		t.Fatalf("nhtemp has minima of AICc at edf %v, want two", low)
+	}
+	near(t, "nhtemp, smoother minimum of AICc", low[0], 2.916, 2e-4)
+	near(t, "nhtemp, rougher minimum of AICc", low[1], 7.071, 1.3e-3) // read off a grid; the minimum is flat
 	e = mustChoose(t, load(t, "nhtemp"), Rule{Name: GCV, Inflate: 1.4})
 	var edfs []float64
 	for _, m := range e.Minima {
@@ -194,8 +215,9 @@ func TestNoBetterOnAFineGrid(t *testing.T) {
 		if err != nil {
 			t.Fatal(err)
 		}
-		for _, name := range []string{GCV, LOOCV, REML} {
-			e, err := Lambda(&ws, d, Rule{Name: name})
+		for _, name := range []string{GCV, LOOCV, REML, AICc, KnownSigma} {
+			rule := Rule{Name: name, Sigma: 0.3}
+			e, err := Lambda(&ws, d, rule)
 			if err != nil {
 				t.Fatal(err)
 			}
@@ -203,9 +225,9 @@ func TestNoBetterOnAFineGrid(t *testing.T) {
 				several++
 			}
 			lo, hi := elementary.Log(e.Candidates[len(e.Candidates)-1].Lambda), elementary.Log(e.Candidates[0].Lambda)
-			s := newSearch(&ws, d, Rule{Name: name})
+			s := newSearch(&ws, d, rule)
 			for k := range 501 {
-				c := s.candidate(math.Exp(lo + (hi-lo)*float64(k)/500))
+				c := s.at(lo + (hi-lo)*float64(k)/500)
 				if c.Score < e.Chosen.Score-1e-9*math.Abs(e.Chosen.Score) {
 					t.Errorf("%s, seed %d: score %.12g at edf %.4f, chosen %.12g at edf %.4f", name, seed, c.Score, c.EDF, e.Chosen.Score, e.Chosen.EDF)
 					break
@@ -365,6 +387,122 @@ func TestOneSE(t *testing.T) {
 	if !(one.Chosen.EDF <= best.Chosen.EDF) || !(one.Chosen.Score >= best.Chosen.Score) {
 		t.Errorf("one_se took edf %g (score %g), the best is edf %g (score %g)", one.Chosen.EDF, one.Chosen.Score, best.Chosen.EDF, best.Chosen.Score)
 	}
+
+	// loocv: the limit from a refit without each row
+	best = mustChoose(t, d, Rule{Name: LOOCV})
+	one = mustChoose(t, d, Rule{Name: LOOCV, OneSE: true})
+	var ws spline.Workspace
+	var loss []float64
+	for i := range x {
+		rest, err := spline.Collapse(append(slices.Clone(x[:i]), x[i+1:]...), append(slices.Clone(y[:i]), y[i+1:]...), nil)
+		if err != nil {
+			t.Fatal(err)
+		}
+		g, _, _ := ws.Fit(rest, best.Chosen.Lambda).At(x[i])
+		loss = append(loss, (y[i]-g)*(y[i]-g))
+	}
+	n, mean, ss := float64(len(loss)), 0.0, 0.0
+	for _, v := range loss {
+		mean += v / n
+	}
+	for _, v := range loss {
+		ss += (v - mean) * (v - mean)
+	}
+	limit := mean + math.Sqrt(ss/(n-1)/n)
+	if one.Chosen.Score > limit || one.Chosen.EDF >= best.Chosen.EDF {
+		t.Errorf("loocv, one_se: score %g at edf %g, limit %g, best edf %g", one.Chosen.Score, one.Chosen.EDF, limit, best.Chosen.EDF)
+	}
+	for _, c := range one.Candidates {
+		if c.EDF < one.Chosen.EDF && c.Score <= limit {
+			t.Errorf("loocv, one_se: edf %g is smoother and within the limit", c.EDF)
+		}
+	}
+}
+
+// TestStretches: folds of neighbours, with a gap, score what a fit to the rest
+// predicts between the rows that are left.
+func TestStretches(t *testing.T) {
+	x, y := noisy(60, 7)
+	for i := 20; i < 23; i++ {
+		x[i] = x[19] // ties stay together
+	}
+	d, err := spline.Collapse(x, y, nil)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var ws spline.Workspace
+	const gap, lambda = 0.35, 0.2
+	s := newSearch(&ws, d, Rule{Name: KFold, Folds: 6, Stretches: true, Gap: gap})
+	if err := s.drawFolds(); err != nil {
+		t.Fatal(err)
+	}
+	for i := 1; i < d.N; i++ {
+		if s.foldOf[i] < s.foldOf[i-1] || d.RowX[i] == d.RowX[i-1] && s.foldOf[i] != s.foldOf[i-1] {
+			t.Fatalf("rows %d and %d are in folds %d and %d", i-1, i, s.foldOf[i-1], s.foldOf[i])
+		}
+	}
+	sum, n := 0.0, 0
+	for f := range int32(6) {
+		var tx, ty []float64
+		lo, hi := math.Inf(1), math.Inf(-1)
+		for i, of := range s.foldOf {
+			if of == f {
+				lo, hi = min(lo, d.RowX[i]), max(hi, d.RowX[i])
+			}
+		}
+		for i := range d.RowX {
+			if d.RowX[i] < lo-gap || d.RowX[i] > hi+gap {
+				tx, ty = append(tx, d.RowX[i]), append(ty, d.RowY[i])
+			}
+		}
+		train, err := spline.Collapse(tx, ty, nil)
+		if err != nil {
+			t.Fatal(err)
+		}
+		fit := (&spline.Workspace{}).Fit(train, lambda)
+		for i, of := range s.foldOf {
+			if of == f && d.RowX[i] > tx[0] && d.RowX[i] < tx[len(tx)-1] {
+				g, _, _ := fit.At(d.RowX[i])
+				sum += (d.RowY[i] - g) * (d.RowY[i] - g)
+				n++
+			}
+		}
+	}
+	score, _ := s.crossValidate(lambda)
+	near(t, "score", score, sum/float64(n), 1e-13)
+	if n >= d.N {
+		t.Error("extrapolated rows were scored")
+	}
+}
+
+// TestResidualTarget: RSS never exceeds the target, the smoothest such curve is
+// taken, and it is said where there is none.
+func TestResidualTarget(t *testing.T) {
+	x, y := noisy(50, 8)
+	d, err := spline.Collapse(x, y, nil)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var ws spline.Workspace
+	for _, sigma := range []float64{0.2, 0.3, 0.4, 0.5, 0.6, 0.68} {
+		e := mustChoose(t, d, Rule{Name: ResidualTarget, Sigma: sigma})
+		goal := 50 * sigma * sigma
+		if e.Chosen.RSS > goal {
+			t.Errorf("sigma %g: RSS %g exceeds %g", sigma, e.Chosen.RSS, goal)
+		}
+		if c := ws.Scores(d, e.Chosen.Lambda*(1+1e-9)); c.RSS <= goal {
+			t.Errorf("sigma %g: a smoother curve will do", sigma)
+		}
+	}
+	line := ws.Scores(d, math.Inf(1))
+	e := mustChoose(t, d, Rule{Name: ResidualTarget, Sigma: 1.01 * math.Sqrt(line.RSS/50)})
+	if !math.IsInf(e.Chosen.Lambda, 1) || !slices.Equal(e.Flags, []string{StraightLine}) {
+		t.Errorf("the line is near enough, but lambda is %g, flags %v", e.Chosen.Lambda, e.Flags)
+	}
+	e = mustChoose(t, d, Rule{Name: ResidualTarget, Sigma: 1e-3})
+	if !slices.Equal(e.Flags, []string{TargetUnreached, AtBound}) {
+		t.Errorf("flags %v where the target is out of reach", e.Flags)
+	}
 }
 
 // TestOthers: what other rules would have taken is what they take.
@@ -421,7 +559,7 @@ func TestKnownBytes(t *testing.T) {
 			}
 		}
 	}
-	const want, version = "41ac0180a4f6dc7618595d8baceeabda", 1
+	const want, version = "f9facf09a0fd9ac0427a1d563d4d7197", 1
 	got := hex.EncodeToString(h.Sum(nil))[:32]
 	switch {
 	case got != want && Version == version:

@@ -1,14 +1,15 @@
 package choose
 
-import (
-	"math"
+import "math"
 
-	"batten/methods/elementary"
-)
-
-// minima finds and refines every local minimum on the lattice.
-func (s *search) minima() []point {
+// minima finds and refines every local minimum on the lattice. With few, those
+// are left out that cannot be the lowest.
+func (s *search) minima(few bool) []point {
 	l := s.lattice
+	lowest := math.Inf(1)
+	for k := range l {
+		lowest = min(lowest, l[k].Score)
+	}
 	var out []point
 	for k := range l {
 		left := k == 0 || l[k].Score < l[k-1].Score
@@ -20,16 +21,52 @@ func (s *search) minima() []point {
 		if k > 0 && !left && l[k].Score == l[k-1].Score {
 			left = true
 		}
-		if !left || !right {
+		if !left || !right || few && !s.within(0.03, lowest, l[k].Score) {
 			continue
 		}
 		if k == 0 || k == len(l)-1 {
 			out = append(out, s.endMinimum(k))
 			continue
 		}
-		out = append(out, s.refine(l[k-1], l[k], l[k+1]))
+		out = append(out, s.refine(l[k-1], l[k], l[k+1], s.guess(k)))
 	}
 	return out
+}
+
+// guess places the minimum near lattice point k by the polynomial through the
+// five points about it.
+func (s *search) guess(k int) float64 {
+	l := s.lattice
+	from := min(max(k-2, 0), len(l)-5)
+	if from < 0 {
+		return l[k].u
+	}
+	var x, c [5]float64
+	for i := range x {
+		x[i], c[i] = l[from+i].u-l[k].u, l[from+i].Score
+	}
+	for j := 1; j < len(x); j++ { // Newton's divided differences
+		for i := len(x) - 1; i >= j; i-- {
+			c[i] = (c[i] - c[i-1]) / (x[i] - x[i-j])
+		}
+	}
+	a, b := l[k-1].u-l[k].u, l[k+1].u-l[k].u
+	best, at := math.Inf(1), 0.0
+	const parts = 32
+	for i := 1; i < parts; i++ {
+		u := a + float64((b-a)*float64(i)/parts)
+		p := c[4]
+		for j := 3; j >= 0; j-- {
+			p = c[j] + float64(p*(u-x[j]))
+		}
+		if p < best {
+			best, at = p, u
+		}
+	}
+	if !(best <= l[k].Score) {
+		at = 0
+	}
+	return l[k].u + at
 }
 
 // endMinimum settles a minimum at an end of the range: a dip may stand just
@@ -40,20 +77,21 @@ func (s *search) endMinimum(k int) point {
 	if k > 0 {
 		inner = k - 1
 	}
-	mid := s.at(0.5 * (l[k].u + l[inner].u))
 	step := 0.02
 	if k > 0 {
 		step = -step
 	}
-	low, next := s.at(l[k].u+step), mid // is there a dip right behind the bound?
+	two := s.points(0.5*(l[k].u+l[inner].u), l[k].u+step)
+	mid := two[0]
+	low, next := two[1], mid // is there a dip right behind the bound?
 	if mid.Score < low.Score {
 		low, next = mid, l[inner]
 	}
 	if low.Score < l[k].Score {
 		if k == 0 {
-			return s.refine(l[k], low, next)
+			return s.refine(l[k], low, next, low.u)
 		}
-		return s.refine(next, low, l[k])
+		return s.refine(next, low, l[k], low.u)
 	}
 	// the bound itself: settle its place
 	df := s.hi
@@ -70,87 +108,84 @@ func (s *search) endMinimum(k int) point {
 	return l[k]
 }
 
-// refine settles the minimum that p brackets within (a, b).
-func (s *search) refine(left, p, right point) point {
+// refine settles the minimum that p brackets between left and right, looking
+// first at u.
+func (s *search) refine(left, p, right point, u float64) point {
 	a, b := left.u, right.u
-	if s.rule.Name == REML {
-		return s.refineREML(a, p, b)
-	}
-	best := p
-	// A parabolic step or two first, for the bracket may be lopsided.
-	fa, fb := left.Score, right.Score
-	u, fu := p.u, p.Score
-	for range 2 {
-		v := vertex(a, fa, u, fu, b, fb)
-		if !(v > a && v < b) {
-			break
-		}
-		if math.Abs(v-u) < 1.5*fine {
-			u = v
-			break
-		}
-		fv := s.score(v)
-		switch {
-		case fv <= fu && v > u:
-			a, fa, u, fu = u, fu, v, fv
-		case fv <= fu:
-			b, fb, u, fu = u, fu, v, fv
-		case v > u:
-			b, fb = v, fv
-		default:
-			a, fa = v, fv
-		}
-	}
-	for range 3 {
+	tried := [2]float64{math.NaN(), math.NaN()}
+	for range 12 {
 		root, inside := s.polish(u)
-		u = root
 		if inside {
+			u = root
 			break
 		}
+		if root <= a || root >= b || root == tried[0] || root == tried[1] {
+			break // off the bracket, or to and fro: the lattice point stands
+		}
+		tried[0], tried[1] = tried[1], u
+		u = root
 	}
 	if u > a-spacing && u < b+spacing {
-		if q := s.at(u); q.Score <= best.Score+float64(1e-12*math.Abs(best.Score)) {
-			best = q
+		if q := s.at(u); q.Score <= p.Score+float64(1e-12*math.Abs(p.Score)) {
+			return q
 		}
 	}
-	return best
+	return p
 }
 
-// vertex of the parabola through three points.
-func vertex(a, fa, u, fu, b, fb float64) float64 {
-	p, q := float64((u-a)*(fu-fb)), float64((u-b)*(fu-fa))
-	den := p - q
-	if den == 0 {
-		return math.NaN()
-	}
-	return u - 0.5*(float64((u-a)*p)-float64((u-b)*q))/den
-}
-
-// polish returns the stationary point of the polynomial through nine evenly
-// spaced scores about u, and whether it lies among them.
+// polish returns the stationary point of the polynomial through evenly spaced
+// scores about u, and whether it lies among them; else where to look next. Of
+// REML the derivative is known and its root taken.
 func (s *search) polish(u float64) (root float64, inside bool) {
-	const n = 2*stencil + 1
-	var c [n]float64 // Newton's forward differences over k!
-	for k := range n {
-		c[k] = s.score(u + float64(float64(k-stencil)*fine))
+	at, c := stencilAt(u), [stencil]float64{}
+	known := s.rule.Name == REML
+	if known {
+		for k, v := range s.criteria(at[:]) {
+			c[k] = v.DREML
+		}
+	} else {
+		s.scores(at[:], c[:])
 	}
-	base := c[stencil]
-	if base != 0 && !math.IsInf(base, 0) {
+	shift, inside := stationary(&c, known)
+	return u + shift, inside
+}
+
+// stencilAt are the polynomial's places about u.
+func stencilAt(u float64) (at [stencil]float64) {
+	for k := range at {
+		at[k] = u + float64((float64(k)-0.5*(stencil-1))*fine)
+	}
+	return at
+}
+
+// stationary finds the minimum of the polynomial through the scores of a
+// stencil, or the root of that through their derivatives, as a distance from
+// the middle; outside, it returns how far to go on.
+func stationary(c *[stencil]float64, derivatives bool) (shift float64, inside bool) {
+	const n, middle = stencil, 0.5 * (stencil - 1)
+	scale := 0.0
+	for _, v := range c {
+		scale = max(scale, math.Abs(v))
+	}
+	if scale != 0 && !math.IsInf(scale, 0) {
 		for k := range c {
-			c[k] /= math.Abs(base)
+			c[k] /= scale
 		}
 	}
-	for k := 1; k < n; k++ {
+	for k := 1; k < n; k++ { // Newton's forward differences over k!
 		for i := n - 1; i >= k; i-- {
 			c[i] = (c[i] - c[i-1]) / float64(k)
 		}
 	}
-	// derivative of the Newton form at t (in steps from the first point)
+	// the derivative at t, in steps from the first point
 	slope := func(t float64) float64 {
 		p, dp := c[n-1], 0.0
 		for k := n - 2; k >= 0; k-- {
 			dp = p + float64(dp*(t-float64(k)))
 			p = c[k] + float64(p*(t-float64(k)))
+		}
+		if derivatives {
+			return p
 		}
 		return dp
 	}
@@ -160,11 +195,11 @@ func (s *search) polish(u float64) (root float64, inside bool) {
 		// the minimum lies outside: go to where the slope points
 		switch {
 		case flo >= 0 && fhi > 0:
-			return u - stencil*fine, false
+			return -float64((n - 2) * fine), false
 		case fhi <= 0 && flo < 0:
-			return u + stencil*fine, false
+			return float64((n - 2) * fine), false
 		}
-		return u, true
+		return 0, true
 	}
 	for range 60 {
 		t := (float64(lo*fhi) - float64(hi*flo)) / (fhi - flo)
@@ -187,46 +222,7 @@ func (s *search) polish(u float64) (root float64, inside bool) {
 			flo *= 0.5
 		}
 	}
-	t := float64(0.5 * (lo + hi))
-	return u + float64((t-stencil)*fine), true
-}
-
-// refineREML finds the root of the derivative, which comes with the criterion.
-func (s *search) refineREML(a float64, p point, b float64) point {
-	slope := func(u float64) float64 {
-		c := s.ws.Criteria(s.d, elementary.Exp(u))
-		return c.DREML
-	}
-	lo, hi, flo, fhi := a, b, slope(a), slope(b)
-	if !(flo < 0 && fhi > 0) {
-		return p
-	}
-	last := 0
-	for range 80 {
-		u := (float64(lo*fhi) - float64(hi*flo)) / (fhi - flo)
-		if !(u > lo && u < hi) {
-			u = 0.5 * (lo + hi)
-		}
-		f := slope(u)
-		if f == 0 || hi-lo <= 1e-11 || math.Abs(f) < 1e-13*math.Abs(float64(s.d.N)) {
-			lo, hi = u, u
-			break
-		}
-		if f < 0 {
-			lo, flo = u, f
-			if last == -1 {
-				fhi *= 0.5
-			}
-			last = -1
-		} else {
-			hi, fhi = u, f
-			if last == 1 {
-				flo *= 0.5
-			}
-			last = 1
-		}
-	}
-	return s.at(0.5 * (lo + hi))
+	return float64((0.5*(lo+hi) - middle) * fine), true
 }
 
 // best is the lowest of the minima, the smoother of equals.

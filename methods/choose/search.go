@@ -3,7 +3,6 @@ package choose
 import (
 	"fmt"
 	"math"
-	"slices"
 	"sort"
 
 	"batten/methods/elementary"
@@ -14,13 +13,14 @@ import (
 // whose nearest singularities lie at a distance of pi off the real axis. A
 // lattice of spacing 1 with a look between its points and behind the bounds
 // missed no minimum of 9,000 simulated choices that a grid of 501 points finds
-// (TestNoBetterOnAFineGrid, at 3,000 seeds), and a polynomial through nine
-// points 0.05 apart has its root to about 1e-9.
+// (TestNoBetterOnAFineGrid, at 3,000 seeds), and a polynomial through eight
+// points 0.06 apart has its stationary point to about 1e-9.
 const (
 	spacing  = 1.0
-	stencil  = 4 // points on each side
-	fine     = 0.05
+	stencil  = 8 // points of the polynomial
+	fine     = 0.06
 	farthest = 600 // steps of the walk, each way
+	lanes    = spline.Lanes
 )
 
 // search is one rule at work on one group.
@@ -33,6 +33,11 @@ type search struct {
 	lo, hi  float64 // bounds of edf
 	folds   []fold
 	foldOf  []int32
+	scored  int // held-out rows that are scored
+	fit     spline.Fit
+
+	lambda []float64 // of a batch
+	out    []spline.Criteria
 }
 
 // point is a candidate with its place.
@@ -50,53 +55,68 @@ func newSearch(ws *spline.Workspace, d *spline.Data, r Rule) *search {
 	return s
 }
 
-// candidate evaluates everything at lambda.
-func (s *search) candidate(lambda float64) Candidate {
-	c := s.ws.Criteria(s.d, lambda)
-	out := Candidate{Lambda: lambda, EDF: c.EDF, RSS: c.RSS, GCV: c.GCV(1), LOOCV: c.LOOCV, REML: c.REML}
-	out.Score = s.pick(&c)
+// criteria evaluates everything at several log lambdas.
+func (s *search) criteria(us []float64) []spline.Criteria {
+	s.lambda, s.out = s.lambda[:0], s.out[:0]
+	for _, u := range us {
+		s.lambda = append(s.lambda, elementary.Exp(u))
+		s.out = append(s.out, spline.Criteria{})
+	}
+	s.ws.CriteriaAt(s.d, s.lambda, s.out)
+	return s.out
+}
+
+// scores evaluates the rule's score alone.
+func (s *search) scores(us []float64, into []float64) {
+	switch s.rule.Name {
+	case KFold:
+		for i, u := range us {
+			into[i], _ = s.crossValidate(elementary.Exp(u))
+		}
+	case REML:
+		for i, c := range s.criteria(us) {
+			into[i] = c.REML
+		}
+	default:
+		s.lambda, s.out = s.lambda[:0], s.out[:0]
+		for _, u := range us {
+			s.lambda = append(s.lambda, elementary.Exp(u))
+			s.out = append(s.out, spline.Criteria{})
+		}
+		s.ws.ScoresAt(s.d, s.lambda, s.out)
+		for i := range us {
+			into[i] = s.pick(&s.out[i])
+		}
+	}
+}
+
+func (s *search) candidate(c *spline.Criteria) Candidate {
+	return Candidate{Lambda: c.Lambda, EDF: c.EDF, RSS: c.RSS, GCV: c.GCV(1), LOOCV: c.LOOCV, REML: c.REML, Score: s.pick(c)}
+}
+
+// points are candidates at several places.
+func (s *search) points(us ...float64) []point {
+	out := make([]point, len(us))
+	for i, c := range s.criteria(us) {
+		out[i] = point{u: us[i], Candidate: s.candidate(&c)}
+	}
 	return out
 }
 
-// pick returns the rule's own score.
-func (s *search) pick(c *spline.Criteria) float64 {
-	switch s.rule.Name {
-	case GCV:
-		return c.GCV(s.inflate)
-	case LOOCV:
-		return c.LOOCV
-	case REML:
-		return c.REML
-	case KFold:
-		score, _ := s.crossValidate(c.Lambda)
-		return score
-	}
-	return c.GCV(1)
-}
+func (s *search) at(u float64) point { return s.points(u)[0] }
 
-// score evaluates the rule's score alone.
-func (s *search) score(u float64) float64 {
-	lambda := elementary.Exp(u)
-	switch s.rule.Name {
-	case GCV, LOOCV:
-		c := s.ws.Scores(s.d, lambda)
-		return s.pick(&c)
-	case KFold:
-		score, _ := s.crossValidate(lambda)
-		return score
-	}
+// atLambda is a candidate at lambda itself, which may be +Inf.
+func (s *search) atLambda(lambda float64) point {
 	c := s.ws.Criteria(s.d, lambda)
-	return s.pick(&c)
+	return point{u: elementary.Log(lambda), Candidate: s.candidate(&c)}
 }
-
-func (s *search) at(u float64) point { return point{u: u, Candidate: s.candidate(elementary.Exp(u))} }
 
 // bounds settles the range of edf that is searched.
 func (s *search) bounds() error {
-	m := float64(len(s.d.X))
-	s.lo, s.hi = LeastDF, float64(MostShare*m)
+	m, null := float64(len(s.d.X)), float64(s.d.Null())
+	s.lo, s.hi = null+leastAbove, float64(MostShare*m)
 	if s.rule.DFAtLeast > 0 {
-		s.lo = max(2+1e-6, s.rule.DFAtLeast)
+		s.lo = max(null+1e-6, s.rule.DFAtLeast)
 	}
 	if s.rule.DFAtMost > 0 {
 		s.hi = min(s.rule.DFAtMost, m-float64(1e-6*m))
@@ -104,6 +124,9 @@ func (s *search) bounds() error {
 	if s.inflate > 1 {
 		// beyond n/inflate the inflated score means nothing
 		s.hi = min(s.hi, 0.99*float64(s.d.N)/s.inflate)
+	}
+	if s.rule.Name == AICc { // it means nothing from n - 2
+		s.hi = min(s.hi, 0.99*float64(s.d.N-2))
 	}
 	if !(s.hi > s.lo) {
 		return RangeError{fmt.Sprintf("no edf is left to search between %.4g and %.4g with %d distinct x", s.lo, s.hi, len(s.d.X))}
@@ -116,8 +139,9 @@ func (s *search) bounds() error {
 func (s *search) middle() float64 {
 	x := s.d.X
 	r := x[len(x)-1] - x[0]
-	const k4 = 97.40909103400244 * 625 // (pi * 5)^4
-	return elementary.Log(s.d.SumW) + float64(3*elementary.Log(r)) - elementary.Log(k4)
+	order := s.d.Null()
+	wave := 2 * order // powers of (pi 5) and of the range
+	return elementary.Log(s.d.SumW) + float64(float64(wave-1)*elementary.Log(r)) - float64(float64(wave)*elementary.Log(5*math.Pi))
 }
 
 // walk fills the lattice from the rough bound of edf to the smooth one.
@@ -126,45 +150,74 @@ func (s *search) walk() error {
 		return err
 	}
 	u0 := s.middle()
-	start := s.at(u0)
-	up, down := []point{}, []point{}
-	inside := func(p point) bool { return p.EDF > s.lo && p.EDF < s.hi }
-	for k, p := 1, start; p.EDF > s.lo && k < farthest; k++ {
-		p = s.at(u0 + float64(float64(k)*spacing))
-		up = append(up, p)
+	var us [lanes]float64
+	batch := func(from float64) []point { // the next steps away from the middle
+		for i := range us {
+			us[i] = u0 + float64((from+float64(i))*spacing)
+		}
+		return s.points(us[:]...)
 	}
-	for k, p := 1, start; p.EDF < s.hi && k < farthest; k++ {
-		p = s.at(u0 - float64(float64(k)*spacing))
-		down = append(down, p)
+	all := batch(-1)
+	for k := 1.0 - 1 + lanes - 1; all[len(all)-1].EDF > s.lo && k < farthest; k += lanes {
+		all = append(all, batch(k)...)
 	}
-	slices.Reverse(down)
-	all := append(append(down, start), up...)
+	for k := -1.0 - lanes; all[0].EDF < s.hi && -k < farthest; k -= lanes {
+		all = append(batch(k), all...)
+	}
 	s.lattice = s.lattice[:0]
+	rough := s.bound(all, s.hi)
+	rough.end = "rough"
+	s.lattice = append(s.lattice, rough)
 	for _, p := range all {
-		if inside(p) {
+		if p.EDF > s.lo && p.EDF < s.hi {
 			s.lattice = append(s.lattice, p)
 		}
 	}
-	rough := s.bound(all, s.hi)
-	rough.end = "rough"
 	smooth := s.bound(all, s.lo)
 	smooth.end = "smooth"
-	s.lattice = append(append([]point{rough}, s.lattice...), smooth)
+	s.lattice = append(s.lattice, smooth)
 	return nil
 }
 
 // bound finds the place where edf is df, between two points of the walk.
 func (s *search) bound(all []point, df float64) point {
 	for k := 0; k+1 < len(all); k++ {
-		if all[k].EDF >= df && all[k+1].EDF <= df {
-			return s.at(s.root(df, all[k].u, all[k].EDF, all[k+1].u, all[k+1].EDF, loosely))
+		a, b := &all[k], &all[k+1]
+		if !(a.EDF >= df && b.EDF <= df) {
+			continue
 		}
+		// first by a polynomial through the points about it
+		if j := min(max(k-1, 0), len(all)-4); j >= 0 {
+			u := 0.0
+			for i := j; i < j+4; i++ {
+				part := all[i].u
+				for h := j; h < j+4; h++ {
+					if h != i {
+						part *= s.bend(all[h].EDF, df) / (s.bend(all[h].EDF, df) - s.bend(all[i].EDF, df))
+					}
+				}
+				u += part
+			}
+			if u >= a.u && u <= b.u {
+				if p := s.at(u); math.Abs(p.EDF-df) <= loosely*df {
+					return p
+				}
+			}
+		}
+		return s.at(s.root(df, a.u, a.EDF, b.u, b.EDF, loosely))
 	}
 	// the walk ended before it: the data's range of edf ends here
 	if all[0].EDF < df {
 		return all[0]
 	}
 	return all[len(all)-1]
+}
+
+// bend is a function of edf that is nearly straight in log lambda, and 0 at
+// df.
+func (s *search) bend(edf, df float64) float64 {
+	m, null := float64(len(s.d.X)), float64(s.d.Null())
+	return elementary.Log((edf - null) / (df - null) * ((m - df) / (m - edf)))
 }
 
 // How closely root settles edf, relative.
@@ -203,13 +256,9 @@ func (s *search) edf(u float64) float64 {
 }
 
 // root finds log lambda with edf = df in [a, b], where edf falls from ea to
-// eb, by regula falsi with the Illinois weights on log((edf-2)/(m-edf)), which
-// is nearly straight in log lambda.
+// eb, by regula falsi with the Illinois weights on bend.
 func (s *search) root(df, a, ea, b, eb, tol float64) float64 {
-	m := float64(len(s.d.X))
-	f := func(e float64) float64 {
-		return elementary.Log((e - 2) / (df - 2) * ((m - df) / (m - e)))
-	}
+	f := func(e float64) float64 { return s.bend(e, df) }
 	if ea == df {
 		return a
 	}
@@ -244,11 +293,17 @@ func (s *search) root(df, a, ea, b, eb, tol float64) float64 {
 	return u
 }
 
-// adopt takes another search's lattice, with this rule's scores.
-func (s *search) adopt(lattice []point) {
-	s.lattice = append([]point(nil), lattice...)
-	for i := range s.lattice {
-		p := &s.lattice[i]
+// adopt takes another search's lattice, with this rule's scores, as far as its
+// range of edf goes. It reports whether anything is left.
+func (s *search) adopt(lattice []point) bool {
+	if s.bounds() != nil {
+		return false
+	}
+	s.lattice = s.lattice[:0:0]
+	for _, p := range lattice {
+		if p.end == "" && (p.EDF > s.hi || p.EDF < s.lo) || p.EDF > float64(s.d.N)-2.5 && s.rule.Name == AICc {
+			continue
+		}
 		switch s.rule.Name {
 		case GCV:
 			p.Score = p.GCV
@@ -256,8 +311,12 @@ func (s *search) adopt(lattice []point) {
 			p.Score = p.LOOCV
 		case REML:
 			p.Score = p.REML
+		case AICc:
+			p.Score = AICC(s.d.N, p.RSS, p.EDF)
 		}
+		s.lattice = append(s.lattice, p)
 	}
+	return len(s.lattice) > 0
 }
 
 func pointsOf(c []Candidate) []point {
@@ -305,8 +364,8 @@ func (s *search) automatic() (*Evidence, error) {
 	}
 	s.look()
 	e := &Evidence{Rule: s.rule.Name, Folds: s.foldOf}
-	found := s.minima()
-	if s.perfectLine() {
+	found := s.minima(false)
+	if s.perfect() {
 		// Every curve fits to rounding: the criteria are noise, and of equals
 		// the smoothest is taken.
 		found = []point{s.lattice[len(s.lattice)-1]}
@@ -318,13 +377,7 @@ func (s *search) automatic() (*Evidence, error) {
 			s.lattice = append(s.lattice, p)
 		}
 	}
-	sort.SliceStable(s.lattice, func(i, j int) bool { return s.lattice[i].u > s.lattice[j].u })
-	for k, p := range s.lattice {
-		if k > 0 && p.u == s.lattice[k-1].u {
-			continue
-		}
-		e.Candidates = append(e.Candidates, p.Candidate)
-	}
+	s.record(e)
 	sort.SliceStable(found, func(i, j int) bool {
 		if found[i].u == best.u || found[j].u == best.u {
 			return found[i].u == best.u && found[j].u != best.u
@@ -333,7 +386,7 @@ func (s *search) automatic() (*Evidence, error) {
 	})
 	e.Chosen = best.Candidate
 	end := best.end
-	if s.rule.Name == KFold && s.rule.OneSE {
+	if s.rule.OneSE {
 		if c, ok := s.oneSE(best.Candidate, e.Candidates); ok {
 			e.Chosen, end = c, ""
 		}
@@ -341,29 +394,38 @@ func (s *search) automatic() (*Evidence, error) {
 	for _, p := range found {
 		e.Minima = append(e.Minima, Minimum{Candidate: p.Candidate, End: p.end, Chosen: p.Lambda == e.Chosen.Lambda})
 	}
-	switch {
-	case e.Chosen.EDF <= LeastDF+1e-3:
-		e.Flags = append(e.Flags, StraightLine)
-	case end != "":
-		e.Flags = append(e.Flags, AtBound)
-	}
-	if len(found) > 1 && s.close(found[0].Score, found[1].Score) {
+	e.Flags = append(e.Flags, s.endFlags(e.Chosen, end)...)
+	if len(found) > 1 && s.within(0.01, found[0].Score, found[1].Score) {
 		e.Flags = append(e.Flags, SeveralMinima)
 	}
 	return e, nil
 }
 
-// close tells whether two minima score within 1% of each other. REML is a log
-// likelihood, where 1% of the profiled deviance counts.
-func (s *search) close(best, other float64) bool {
-	if s.rule.Name == REML {
-		return other-best <= float64(0.01*float64(s.d.N-2))
+// record lists the lattice as candidates, in order of edf.
+func (s *search) record(e *Evidence) {
+	sort.SliceStable(s.lattice, func(i, j int) bool { return s.lattice[i].u > s.lattice[j].u })
+	for k, p := range s.lattice {
+		if k > 0 && p.u == s.lattice[k-1].u {
+			continue
+		}
+		e.Candidates = append(e.Candidates, p.Candidate)
 	}
-	return other <= float64(1.01*best)
 }
 
-// perfectLine tells whether a straight line fits the data to rounding.
-func (s *search) perfectLine() bool {
+// endFlags says of a choice whether it is the null space, or an end of the
+// range.
+func (s *search) endFlags(c Candidate, end string) []string {
+	switch {
+	case c.EDF <= float64(s.d.Null())+leastAbove+1e-3:
+		return []string{StraightLine}
+	case end != "":
+		return []string{AtBound}
+	}
+	return nil
+}
+
+// perfect tells whether a curve without roughness fits the data to rounding.
+func (s *search) perfect() bool {
 	scale := 0.0
 	for i, y := range s.d.Y {
 		scale += float64(float64(s.d.W[i]*y) * y)

@@ -174,3 +174,7 @@ func (d *Data) collapse() {
 		d.yc = append(d.yc, y-d.shift)
 	}
 }
+
+// Null is the number of parameters that the penalty leaves free: 2, those of a
+// straight line.
+func (d *Data) Null() int { return 2 }
