@@ -68,13 +68,15 @@ func build(d *Document) []node {
 	}
 	out = append(out, summary(d)...)
 	rules := map[string]bool{}
+	pointwise := len(d.Curves) == 0
 	for i := range d.Curves {
+		pointwise = pointwise || d.Curves[i].BandKind != "simultaneous"
 		out = append(out, curveSection(&d.Curves[i], i, rules)...)
 	}
 	for i := range d.Contrasts {
 		out = append(out, contrastSection(&d.Contrasts[i], i)...)
 	}
-	out = append(out, howToRead(rules, len(d.Contrasts) > 0)...)
+	out = append(out, howToRead(rules, pointwise, len(d.Contrasts) > 0)...)
 	return append(out, record(&d.Record)...)
 }
 
@@ -236,7 +238,7 @@ func definition(c *Curve) string {
 	if c.Weight != "" {
 		s += fmt.Sprintf(", rows weighted by %s", c.Weight)
 	}
-	return s + fmt.Sprintf(". Smoothness by the rule %s. The band holds %s pointwise with %s%%.", c.Rule, c.BandFor, percent(c.Level))
+	return s + fmt.Sprintf(". Smoothness by the rule %s. The band holds %s %s with %s%%.", c.Rule, c.BandFor, held(c.BandKind), percent(c.Level))
 }
 
 func rowsText(r *RowCount) string {
@@ -350,7 +352,7 @@ func fitBody(c *Curve, f *Fit, file string) []node {
 					at = " at " + isoDate(r.At)
 				}
 			}
-			g.rows = append(g.rows, []string{r.Name, strings.ReplaceAll(r.Kind, "_at", ", place") + at, v, lo, hi, unitText(r, c.X), r.Note})
+			g.rows = append(g.rows, []string{r.Name, strings.ReplaceAll(strings.ReplaceAll(r.Kind, "_at", ", place"), "_", " ") + at, v, lo, hi, unitText(r, c.X), r.Note})
 		}
 		out = append(out, g)
 	}
@@ -416,10 +418,20 @@ func some(names []string) string {
 	return strings.Join(names, "; ")
 }
 
+// held says how a band holds.
+func held(kind string) string {
+	if kind == "simultaneous" {
+		return "over its whole grid at once"
+	}
+	return "pointwise"
+}
+
 func contrastSection(c *Contrast, index int) []node {
-	out := []node{heading{2, c.Name}, para{fmt.Sprintf("The difference of the %s curves, %s less %s by %s, with a pointwise band of %s%%. "+
-		"Groups are taken as independent; the figure's axis is marked where the band excludes zero.", c.Of, c.Minus[0], c.Minus[1], c.Across, percent(c.Level))}}
-	g := grid{caption: "Where the pointwise band excludes zero", header: []string{"group", "stretches of " + c.X.label()}, right: []bool{false, false}}
+	out := []node{heading{2, c.Name}, para{fmt.Sprintf("The difference of the %s curves, %s less %s by %s, with a %s band of %s%%. "+
+		"Groups are taken as independent. The figure's axis is marked where the simultaneous band excludes zero: there the curves surely differ.",
+		c.Of, c.Minus[0], c.Minus[1], c.Across, c.BandKind, percent(c.Level))}}
+	g := grid{caption: "Do the curves differ, and do they run parallel? P by Holm's method over the pairs in brackets.",
+		header: []string{"group", "no difference", "parallel", "surely apart over " + c.X.label()}, right: []bool{false, true, true, false}}
 	pics := gallery{}
 	for i := range c.Pairs {
 		p := &c.Pairs[i]
@@ -434,7 +446,7 @@ func contrastSection(c *Contrast, index int) []node {
 		if len(s) == 0 {
 			s = []string{"nowhere"}
 		}
-		g.rows = append(g.rows, []string{name, strings.Join(s, "; ")})
+		g.rows = append(g.rows, []string{name, pText(p.None), pText(p.Same), strings.Join(s, "; ")})
 		if i < maxTiny {
 			pics.pictures = append(pics.pictures, picture{fmt.Sprintf("contrast_%s_%03d.svg", fileName(c.Name, index), i+1), name,
 				func(t theme) []byte { return contrastFigure(c, p, t) }})
@@ -445,6 +457,20 @@ func contrastSection(c *Contrast, index int) []node {
 		out = append(out, para{"Pairs that could not be formed:"}, list{c.Missing})
 	}
 	return out
+}
+
+// pText writes a p-value with the adjusted one.
+func pText(t Test) string {
+	one := func(p float64) string {
+		switch {
+		case math.IsNaN(p):
+			return "none"
+		case p < 0.0001:
+			return "< 0.0001"
+		}
+		return short(p, 2)
+	}
+	return one(t.P) + " [" + one(t.Adjusted) + "]"
 }
 
 func record(r *Record) []node {

@@ -55,6 +55,7 @@ type Curve struct {
 	Rule       string   // the rule in words of the spec, e.g. "gcv" or "fixed_df, df = 4"
 	Level      float64  // of the band
 	BandFor    string   // "the curve" or "a new reading"
+	BandKind   string   // pointwise, simultaneous
 	Rows       RowCount // how the input's rows became this curve's rows
 	Exceptions []Exception
 	Guards     []Guard
@@ -176,6 +177,7 @@ type Contrast struct {
 	Minus            [2]string
 	X, Y             Axis
 	Level            float64
+	BandKind         string // pointwise, simultaneous
 	Pairs            []Pair
 	Missing          []string // pairs that could not be formed, with why
 }
@@ -184,8 +186,13 @@ type Contrast struct {
 type Pair struct {
 	Group     string       // "cultivar=Aroma", or "" where no by column remains
 	Grid      []GridPoint  // Fit is the difference; Slope its slope
-	SurelyNot [][2]float64 // stretches of x where the pointwise band excludes zero
+	SurelyNot [][2]float64 // stretches of x where the simultaneous band excludes zero
+	None      Test         // of no difference
+	Same      Test         // of parallel curves
 }
+
+// Test is a test's p-value, and that adjusted for the number of pairs.
+type Test struct{ P, Adjusted float64 }
 
 // Record is the provenance.
 type Record struct {

@@ -14,12 +14,12 @@ var ruleWords = []struct{ rule, text string }{
 }
 
 // howToRead explains the terms of the report, and cautions.
-func howToRead(rules map[string]bool, contrasts bool) []node {
+func howToRead(rules map[string]bool, pointwise, contrasts bool) []node {
 	items := []string{
 		"A curve is a penalised smooth: of all curves it has the least weighted squared distance to the rows plus lambda times its total squared bend. Between the data it is a cubic, beyond them a straight line.",
 		"edf, the effective degrees of freedom, counts how many free numbers the curve spends: 2 is a straight line, more is wigglier. It can be compared between groups; lambda cannot.",
 		"sigma is the residual standard deviation of a row of weight 1, sqrt(RSS / (n − edf)).",
-		"The band is pointwise: at any one x it holds the curve with the stated level, averaged along the curve. It does not hold the whole curve at once.",
+		bandWords(pointwise),
 		"A crossing or a peak has the interval over which the band still allows it. “Open” means that the data end before the interval does.",
 	}
 	for _, r := range ruleWords {
@@ -28,7 +28,8 @@ func howToRead(rules map[string]bool, contrasts bool) []node {
 		}
 	}
 	if contrasts {
-		items = append(items, "A difference of two curves adds their variances. Looking along a whole axis, or at many pairs, finds a stretch without zero by chance more often than the level says.")
+		items = append(items, "A difference of two curves adds their variances. No difference: the largest difference in units of its standard error, judged over the whole stretch at once by the tube formula. "+
+			"Parallel: the same for the difference less its mean, judged by draws from the posterior. P by Holm's method allows for the number of pairs.")
 	}
 	return []node{
 		heading{2, "How to read this"}, list{items},
@@ -36,4 +37,11 @@ func howToRead(rules map[string]bool, contrasts bool) []node {
 			"they do not cover a wrong rule, a bias common to all readings, or whatever was not measured. Curves beyond the data rest on assumption alone. " +
 			"Where a decision can affect health or safety, follow the standards and local codes that apply and the judgement of licensed practice; this report does not replace them."},
 	}
+}
+
+func bandWords(pointwise bool) string {
+	if pointwise {
+		return "The band is pointwise: at any one x it holds the curve with the stated level, averaged along the curve. It does not hold the whole curve at once."
+	}
+	return "A simultaneous band holds the whole curve over its grid at once, with the stated level. Readings have their own, pointwise, intervals."
 }

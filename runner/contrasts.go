@@ -83,21 +83,21 @@ func (cf *curveFits) pairs(c *spec.Contrast) (out []pair, missing []string) {
 }
 
 // difference tabulates a pair's difference over the stretch of x that both
-// groups' data cover, on the curve's own grid.
-func (cf *curveFits) difference(p pair) ([]reading.Point, error) {
+// groups' data cover, on the curve's own grid, and tests it.
+func (cf *curveFits) difference(s *spec.Study, c *spec.Contrast, p pair) (out reading.Contrast, err error) {
 	a, b := &fitter{}, &fitter{}
 	fa, err := a.open(cf.fits[p.first])
 	if err != nil {
-		return nil, err
+		return out, err
 	}
 	fb, err := b.open(cf.fits[p.minus])
 	if err != nil {
-		return nil, err
+		return out, err
 	}
 	lo := max(fa.Knots[0], fb.Knots[0])
 	hi := min(fa.Knots[len(fa.Knots)-1], fb.Knots[len(fb.Knots)-1])
 	if hi <= lo {
-		return nil, nil
+		return out, nil
 	}
 	grid := cf.def.Grid
 	if len(grid.At) == 0 {
@@ -105,7 +105,7 @@ func (cf *curveFits) difference(p pair) ([]reading.Point, error) {
 	}
 	xs, err := gridOf(&grid, lo, hi)
 	if err != nil {
-		return nil, err
+		return out, err
 	}
 	inside := xs[:0:0]
 	for _, x := range xs {
@@ -113,30 +113,55 @@ func (cf *curveFits) difference(p pair) ([]reading.Point, error) {
 			inside = append(inside, x)
 		}
 	}
-	return reading.Difference(fa, fb, cf.def.Band.Level, inside), nil
+	band := reading.Band{Level: cf.def.Band.Level, Simultaneous: cf.def.Band.Simultaneous}
+	return reading.Difference(fa, fb, band, inside, s.Seed, fitName(c.Name.Text, p.label)), nil
 }
 
-// surely lists the stretches of the grid where the pointwise band excludes 0.
-func surely(grid []reading.Point) [][2]float64 {
-	var out [][2]float64
-	open, sign := false, 0
-	for _, p := range grid {
-		s := 0
-		if p.Lower > 0 {
-			s = 1
-		} else if p.Upper < 0 {
-			s = -1
-		}
-		switch {
-		case s == 0:
-			open = false
-		case open && s == sign:
-			out[len(out)-1][1] = p.X
-		default:
-			out = append(out, [2]float64{p.X, p.X})
-			open = true
-		}
-		sign = s
+// tested is a contrast's pair with its tests, adjusted for the number of pairs.
+type tested struct {
+	pair
+	reading.Contrast
+	holmNone, holmSame float64
+}
+
+// testedPairs are a contrast's pairs, and those without a stretch in common.
+type testedPairs struct {
+	pairs []tested
+	apart []string
+}
+
+// test tabulates and tests all pairs of a contrast, once.
+func (cf *curveFits) test(s *spec.Study, c *spec.Contrast) (out []tested, missing []string, err error) {
+	if done, ok := cf.tests[c.Name.Text]; ok {
+		_, missing = cf.pairs(c)
+		return done.pairs, append(missing, done.apart...), nil
 	}
-	return out
+	pairs, missing := cf.pairs(c)
+	var apart []string
+	var none, same []float64
+	for _, p := range pairs {
+		d, err := cf.difference(s, c, p)
+		if err != nil {
+			return nil, nil, err
+		}
+		if len(d.Grid) == 0 {
+			name := p.label
+			if name == "" {
+				name = c.Of
+			}
+			apart = append(apart, name+": the two groups' data have no stretch of x in common")
+			continue
+		}
+		out = append(out, tested{pair: p, Contrast: d})
+		none, same = append(none, d.None.P), append(same, d.Same.P)
+	}
+	none, same = reading.Holm(none), reading.Holm(same)
+	for i := range out {
+		out[i].holmNone, out[i].holmSame = none[i], same[i]
+	}
+	if cf.tests == nil {
+		cf.tests = map[string]testedPairs{}
+	}
+	cf.tests[c.Name.Text] = testedPairs{out, apart}
+	return out, append(missing, apart...), nil
 }

@@ -32,8 +32,10 @@ type curveFits struct {
 	fits    []*storedFit
 	values  [][]value // of fits[i]
 	by      []string
-	reused  []bool    // of fits[i]: it came from the store
-	verdict []verdict // of fits[i]; set by judge
+	seed    int64                  // of draws from a posterior
+	reused  []bool                 // of fits[i]: it came from the store
+	verdict []verdict              // of fits[i]; set by judge
+	tests   map[string]testedPairs // of contrasts
 }
 
 // manifest is what the store keeps of a curve: its parts and row counts.
@@ -73,7 +75,7 @@ func (r *curveRun) fit(ctx context.Context, c *spec.Curve) (*curveFits, error) {
 	if err != nil {
 		return nil, err
 	}
-	cf := &curveFits{def: c, count: f.count, aside: aside, by: byNames(c)}
+	cf := &curveFits{def: c, count: f.count, aside: aside, by: byNames(c), seed: r.study.Seed}
 	jobs := r.plan(c, groups)
 	r.total.Add(int64(len(jobs)))
 	r.progress.Start(c.Name.Text, len(groups))
@@ -136,7 +138,7 @@ func (r *curveRun) recall(c *spec.Curve, key string) *curveFits {
 	if !ok {
 		return nil
 	}
-	cf, err := openCurve(r.store, c, dig, b)
+	cf, err := openCurve(r.store, c, r.study.Seed, dig, b)
 	if err != nil {
 		return nil
 	}
@@ -162,12 +164,12 @@ func inputOf(s *spec.Study, table string) string {
 
 // openCurve reads a curve's fits by its manifest. An error means that some
 // object is missing, damaged or of another layout.
-func openCurve(st *store.Store, c *spec.Curve, dig string, b []byte) (*curveFits, error) {
+func openCurve(st *store.Store, c *spec.Curve, seed int64, dig string, b []byte) (*curveFits, error) {
 	var m manifest
 	if err := cbor.Unmarshal(b, &m); err != nil {
 		return nil, err
 	}
-	cf := &curveFits{def: c, digest: dig, count: m.Count, aside: m.Aside, zero: m.Zero, rows: m.Rows, by: byNames(c)}
+	cf := &curveFits{def: c, digest: dig, count: m.Count, aside: m.Aside, zero: m.Zero, rows: m.Rows, by: byNames(c), seed: seed}
 	parts := make([]storedPart, len(m.Parts))
 	var eg errgroup.Group
 	eg.SetLimit(runtime.GOMAXPROCS(0))

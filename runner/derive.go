@@ -29,7 +29,8 @@ type wants struct{ grid, readings bool }
 
 // derive opens a stored fit and takes from it what is wanted. The result
 // stands until the worker's next fit.
-func (ft *fitter) derive(c *spec.Curve, f *storedFit, v verdict, want wants) (*derived, error) {
+func (ft *fitter) derive(cf *curveFits, i int, want wants) (*derived, error) {
+	c, f, v := cf.def, cf.fits[i], cf.verdict[i]
 	fit, err := ft.open(f)
 	if err != nil {
 		return nil, err
@@ -41,12 +42,23 @@ func (ft *fitter) derive(c *spec.Curve, f *storedFit, v verdict, want wants) (*d
 		if err != nil {
 			return nil, err
 		}
-		d.grid = reading.Tabulate(fit, band(c), xs, nil)
+		b, err := band(c, fit)
+		if err != nil {
+			return nil, err
+		}
+		d.grid = reading.Tabulate(fit, b, xs, nil)
 	}
 	if want.readings {
 		for i := range c.Readings {
 			r := &c.Readings[i]
-			for _, res := range reading.Take(fit, c.Band.Level, ask(r)) {
+			a := reading.Ask{Kind: r.Kind, At: r.At, Direction: r.Direction, All: r.All, From: r.From, To: r.To}
+			if r.Kind == spec.Surely || r.Kind == spec.Steepest {
+				if a.Grid, err = gridOf(&c.Grid, lo, hi); err != nil {
+					return nil, err
+				}
+				a.Seed, a.Group = cf.seed, fitName(c.Name.Text, label(byNames(c), f.Group))
+			}
+			for _, res := range reading.Take(fit, c.Band.Level, a) {
 				d.readings = append(d.readings, namedReading{r, res})
 			}
 		}
@@ -98,23 +110,31 @@ func beyond(r *spec.Reading, lo, hi float64) bool {
 	switch r.Kind {
 	case spec.ValueAt, spec.SlopeAt:
 		return r.At < lo || r.At > hi
-	case spec.Area:
+	case spec.Area, spec.Mean, spec.Change:
 		return r.From < lo || r.To > hi
 	}
 	return false
 }
 
-func band(c *spec.Curve) reading.Band {
-	return reading.Band{Level: c.Band.Level, NewReading: c.Band.NewReading, Weight: c.Band.Weight}
-}
-
-func ask(r *spec.Reading) reading.Ask {
-	return reading.Ask{Kind: r.Kind, At: r.At, Direction: r.Direction, All: r.All, From: r.From, To: r.To}
+// band is the interval that stands about a fit's curve. A simultaneous one
+// holds over the stretch of the fit's grid.
+func band(c *spec.Curve, fit *spline.Fit) (reading.Band, error) {
+	b := reading.Band{Level: c.Band.Level, Simultaneous: c.Band.Simultaneous, NewReading: c.Band.NewReading, Weight: c.Band.Weight}
+	if b.Simultaneous {
+		xs, err := gridOf(&c.Grid, fit.Knots[0], fit.Knots[len(fit.Knots)-1])
+		if err != nil {
+			return b, err
+		}
+		if len(xs) > 0 {
+			b.From, b.To = xs[0], xs[len(xs)-1]
+		}
+	}
+	return b, nil
 }
 
 // isPlace tells whether a reading's value is a place on the x axis.
 func isPlace(kind string) bool {
-	return slices.Contains([]string{spec.Crossing, "maximum_at", "minimum_at", "steepest_at"}, kind)
+	return slices.Contains([]string{spec.Crossing, "maximum_at", "minimum_at", "steepest_at", "surely_rising", "surely_falling"}, kind)
 }
 
 // unitOf returns a reading's unit from those of the axes.

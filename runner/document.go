@@ -99,6 +99,13 @@ func (r *Run) provenance() reports.Record {
 	return out
 }
 
+func bandKind(b *spec.Band) string {
+	if b.Simultaneous {
+		return "simultaneous"
+	}
+	return "pointwise"
+}
+
 func axis(c *spec.Column) reports.Axis {
 	return reports.Axis{Name: c.Name.Text, Unit: c.Unit, Date: c.Kind == expr.Date}
 }
@@ -107,7 +114,7 @@ func (r *Run) curveDocument(ctx context.Context, c *spec.Curve, brief bool) (*re
 	cf := r.curves[c.Name.Text]
 	out := &reports.Curve{
 		Name: c.Name.Text, X: axis(&c.Along), Y: axis(&c.Response), By: cf.by, Rule: ruleText(&c.Rule),
-		Level: c.Band.Level, BandFor: "the curve",
+		Level: c.Band.Level, BandFor: "the curve", BandKind: bandKind(&c.Band),
 		Rows: reports.RowCount{Read: cf.count.Read, ZeroWeight: cf.zero},
 	}
 	if c.Band.NewReading {
@@ -243,7 +250,7 @@ func ruleText(r *spec.Rule) string {
 // wanted too.
 func fitDocument(ft *fitter, cf *curveFits, i int, want wants) (*reports.Fit, error) {
 	c, f := cf.def, cf.fits[i]
-	d, err := ft.derive(c, f, cf.verdict[i], want)
+	d, err := ft.derive(cf, i, want)
 	if err != nil {
 		return nil, err
 	}
@@ -255,7 +262,7 @@ func fitDocument(ft *fitter, cf *curveFits, i int, want wants) (*reports.Fit, er
 	for _, q := range d.readings {
 		out.Readings = append(out.Readings, reports.Reading{
 			Name: q.def.Name.Text, Kind: q.Kind, At: q.At, Value: q.Value, Lower: q.Lower, Upper: q.Upper,
-			Unit: unitOf(c, q.Kind), ValueIsX: isPlace(q.Kind), AtIsX: !isPlace(q.Kind) && q.Kind != spec.Area, Note: q.Note})
+			Unit: unitOf(c, q.Kind), ValueIsX: isPlace(q.Kind), AtIsX: !isPlace(q.Kind) && q.Kind != spec.Area && q.Kind != spec.Mean && q.Kind != spec.Change, Note: q.Note})
 	}
 	for _, name := range d.flags {
 		out.Flags = append(out.Flags, reports.Flag{Name: name, Text: flagText(name, cf.verdict[i])})
@@ -358,23 +365,18 @@ func placeText(c *spec.Column, x float64) string {
 func (r *Run) contrastDocument(c *spec.Contrast) (*reports.Contrast, error) {
 	cf := r.curves[c.Of]
 	out := &reports.Contrast{Name: c.Name.Text, Of: c.Of, Across: c.Across, Minus: c.Minus,
-		X: axis(&cf.def.Along), Y: axis(&cf.def.Response), Level: cf.def.Band.Level}
-	pairs, missing := cf.pairs(c)
+		X: axis(&cf.def.Along), Y: axis(&cf.def.Response), Level: cf.def.Band.Level, BandKind: bandKind(&cf.def.Band)}
+	pairs, missing, err := cf.test(r.Study, c)
+	if err != nil {
+		return nil, err
+	}
 	out.Missing = missing
 	for _, p := range pairs {
-		grid, err := cf.difference(p)
-		if err != nil {
-			return nil, err
-		}
-		if len(grid) == 0 {
-			out.Missing = append(out.Missing, p.label+": the two groups' data have no stretch of x in common")
-			continue
-		}
-		doc := reports.Pair{Group: p.label}
-		for _, g := range grid {
+		doc := reports.Pair{Group: p.label, SurelyNot: p.Sure,
+			None: reports.Test{P: p.None.P, Adjusted: p.holmNone}, Same: reports.Test{P: p.Same.P, Adjusted: p.holmSame}}
+		for _, g := range p.Grid {
 			doc.Grid = append(doc.Grid, gridPoint(g))
 		}
-		doc.SurelyNot = surely(grid)
 		out.Pairs = append(out.Pairs, doc)
 	}
 	return out, nil

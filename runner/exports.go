@@ -3,6 +3,7 @@ package runner
 import (
 	"bytes"
 	"context"
+	"fmt"
 	"io"
 	"math"
 	"sort"
@@ -39,7 +40,8 @@ func (r *Run) exportKey(e *spec.Export) string {
 	}
 	k.add("along", c.Along.Name.Text, c.Along.Unit)
 	k.add("response", c.Response.Name.Text, c.Response.Unit)
-	k.add("band", c.Band.Level, c.Band.NewReading, c.Band.Weight)
+	k.add("band", c.Band.Level, c.Band.Simultaneous, c.Band.NewReading, c.Band.Weight)
+	k.add("seed", r.Study.Seed)
 	g := c.Grid
 	k.add("grid", g.Points, g.Step, len(g.At))
 	for _, x := range g.At {
@@ -64,7 +66,7 @@ func (r *Run) exportKey(e *spec.Export) string {
 // export writes one export.
 func (r *Run) export(ctx context.Context, e *spec.Export, out io.Writer) error {
 	if c := r.Study.ContrastByName(e.Of); c != nil {
-		return r.exportContrast(c, out)
+		return r.exportContrast(c, e.What, out)
 	}
 	cf := r.curves[e.Of]
 	x := &exporter{cf: cf, what: e.What}
@@ -197,7 +199,7 @@ func (x *exporter) fit(ft *fitter, w *table.Writer, k int) error {
 		x.evidence(w, k)
 		return nil
 	}
-	d, err := ft.derive(c, f, x.cf.verdict[k], wants{grid: x.what == spec.ExportGrid, readings: x.what == spec.ExportReadings})
+	d, err := ft.derive(x.cf, k, wants{grid: x.what == spec.ExportGrid, readings: x.what == spec.ExportReadings})
 	if err != nil {
 		return err
 	}
@@ -342,8 +344,8 @@ func (r *Run) findLines(ctx context.Context, x *exporter) error {
 	return r.sameInputs()
 }
 
-// exportContrast writes a contrast's differences on their grid.
-func (r *Run) exportContrast(c *spec.Contrast, out io.Writer) error {
+// exportContrast writes a contrast's differences on their grid, or its tests.
+func (r *Run) exportContrast(c *spec.Contrast, what string, out io.Writer) error {
 	cf := r.curves[c.Of]
 	var names []string
 	for _, b := range cf.by {
@@ -351,26 +353,54 @@ func (r *Run) exportContrast(c *spec.Contrast, out io.Writer) error {
 			names = append(names, b)
 		}
 	}
+	columns := []string{cf.def.Along.Name.Text, "fit", "se", "lower", "upper", "slope"}
+	if what == spec.ExportTests {
+		columns = []string{"test", "method", "largest", "p", "p_holm", "from", "to"}
+	}
 	var buf bytes.Buffer
-	if err := table.Header(&buf, append(names, cf.def.Along.Name.Text, "fit", "se", "lower", "upper", "slope")); err != nil {
+	if err := table.Header(&buf, append(names, columns...)); err != nil {
 		return err
 	}
+	pairs, _, err := cf.test(r.Study, c)
+	if err != nil {
+		return err
+	}
+	date := cf.def.Along.Kind == expr.Date
 	w := table.Writer{SafeCells: true}
-	pairs, _ := cf.pairs(c)
 	for _, p := range pairs {
-		grid, err := cf.difference(p)
-		if err != nil {
-			return err
-		}
-		for _, g := range grid {
+		begin := func() {
 			for _, v := range p.values {
 				groupCell(&w, v)
 			}
-			w.Place(g.X, cf.def.Along.Kind == expr.Date)
-			gridCells(&w, g)
+		}
+		if what == spec.ExportGrid {
+			for _, g := range p.Grid {
+				begin()
+				w.Place(g.X, date)
+				gridCells(&w, g)
+			}
+			continue
+		}
+		lo, hi := p.Grid[0].X, p.Grid[len(p.Grid)-1].X
+		row := func(test, method string, largest, v, adjusted, from, to float64) {
+			begin()
+			w.Text(test)
+			w.Text(method)
+			for _, q := range []float64{largest, v, adjusted} {
+				w.Number(q)
+			}
+			w.Place(from, date)
+			w.Place(to, date)
+			w.End()
+		}
+		nan := math.NaN()
+		row("no_difference", "largest difference over its standard error; tube formula", p.None.Largest, p.None.P, p.holmNone, lo, hi)
+		row("parallel", fmt.Sprintf("largest departure from the mean difference; %d posterior draws", reading.Draws), p.Same.Largest, p.Same.P, p.holmSame, lo, hi)
+		for _, s := range p.Sure {
+			row("surely_apart", "simultaneous band excludes 0", nan, nan, nan, s[0], s[1])
 		}
 	}
 	buf.Write(w.Bytes())
-	_, err := out.Write(buf.Bytes())
+	_, err = out.Write(buf.Bytes())
 	return err
 }

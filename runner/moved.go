@@ -39,7 +39,7 @@ func entries(ctx context.Context, cf *curveFits, workers int) ([]ledger.Entry, e
 	out := make([]ledger.Entry, len(cf.fits))
 	err := eachFit(ctx, cf, workers, func(ft *fitter, i int) error {
 		f := cf.fits[i]
-		d, err := ft.derive(cf.def, f, cf.verdict[i], wants{readings: true})
+		d, err := ft.derive(cf, i, wants{readings: true})
 		if err != nil {
 			return err
 		}

@@ -93,7 +93,7 @@ func (r *Recorded) curve(name string) (*curveFits, error) {
 		if !ok {
 			return nil, fmt.Errorf("the fits of run %s are no longer in the store; run the study again: batten run %s", r.Record.Run, r.Study.Dir)
 		}
-		cf, err := openCurve(r.store, c, cr.Object, b)
+		cf, err := openCurve(r.store, c, r.Study.Seed, cr.Object, b)
 		if err != nil {
 			return nil, fmt.Errorf("the fits of run %s cannot be read (%w); run the study again: batten run %s", r.Record.Run, err, r.Study.Dir)
 		}
@@ -204,7 +204,7 @@ func (r *Recorded) Why(ctx context.Context, curve string, match []Match) (*Answe
 	}
 	i := at[0]
 	f := cf.fits[i]
-	one := &curveFits{def: cf.def, digest: cf.digest, count: cf.count, aside: cf.aside, zero: cf.zero, by: cf.by,
+	one := &curveFits{def: cf.def, digest: cf.digest, count: cf.count, aside: cf.aside, zero: cf.zero, by: cf.by, seed: cf.seed,
 		fits: cf.fits[i : i+1], values: cf.values[i : i+1], verdict: cf.verdict[i : i+1]}
 	run.curves[curve] = one
 	run.opt.fill()
@@ -268,7 +268,11 @@ func (r *Recorded) Read(curve string, match []Match, xs []float64) ([]Values, *s
 		if err != nil {
 			return nil, nil, err
 		}
-		out = append(out, Values{name, f.Group, append([]reading.Point(nil), reading.Tabulate(fit, band(cf.def), sorted, nil)...)})
+		b, err := band(cf.def, fit)
+		if err != nil {
+			return nil, nil, err
+		}
+		out = append(out, Values{name, f.Group, append([]reading.Point(nil), reading.Tabulate(fit, b, sorted, nil)...)})
 	}
 	return out, cf.def, nil
 }

@@ -272,8 +272,13 @@ func (r *reader) band(b *block, out *Band) {
 		}
 		out.Level = v
 	}
-	if k := b.word("kind", false, "pointwise"); k.Text != "" && k.Text != "pointwise" {
-		r.fail(k.Range, fmt.Sprintf("unknown kind of band %q", k.Text), "expected pointwise%s", expr.Suggest(k.Text, []string{"pointwise"}))
+	kind := b.word("kind", false, "pointwise or simultaneous")
+	switch kind.Text {
+	case "", "pointwise":
+	case "simultaneous":
+		out.Simultaneous = true
+	default:
+		r.fail(kind.Range, fmt.Sprintf("unknown kind of band %q", kind.Text), "expected pointwise or simultaneous%s", expr.Suggest(kind.Text, []string{"pointwise", "simultaneous"}))
 	}
 	switch k := b.word("for", false, "curve or new_reading"); k.Text {
 	case "", "curve":
@@ -281,6 +286,9 @@ func (r *reader) band(b *block, out *Band) {
 		out.NewReading = true
 	default:
 		r.fail(k.Range, fmt.Sprintf("a band for %q", k.Text), "expected curve or new_reading%s", expr.Suggest(k.Text, []string{"curve", "new_reading"}))
+	}
+	if out.Simultaneous && out.NewReading {
+		r.fail(kind.Range, "a simultaneous band for new readings", "expected kind = pointwise with for = new_reading: new readings scatter one by one")
 	}
 	out.Weight, _ = b.number("weight", false, 5e-324, math.MaxFloat64, "a weight above 0")
 	if a := b.attrs["weight"]; a != nil && !out.NewReading {
@@ -345,7 +353,7 @@ func (r *reader) grid(b *block, out *Grid, date bool) {
 }
 
 // askers are the arguments that say what a reading is.
-var askers = []string{"value_at", "slope_at", "crosses", "maximum", "minimum", "steepest", "area"}
+var askers = []string{"value_at", "slope_at", "crosses", "maximum", "minimum", "steepest", "area", "mean", "change", "surely"}
 
 // reading reads one reading block.
 func (r *reader) reading(b *block, name Name, date bool) (Reading, bool) {
@@ -387,11 +395,11 @@ func (r *reader) reading(b *block, name Name, date bool) (Reading, bool) {
 		yes(Minimum)
 	case "steepest":
 		yes(Steepest)
-	case "area":
-		q.Kind = Area
+	case "area", "mean", "change":
+		q.Kind = map[string]string{"area": Area, "mean": Mean, "change": Change}[what[0]]
 		t, isList := e.(*hclsyntax.TupleConsExpr)
 		if !isList || len(t.Exprs) != 2 {
-			r.fail(e.Range(), "an area that is no stretch", "expected area = [from, to]")
+			r.fail(e.Range(), article(what[0])+" "+what[0]+" that is no stretch", "expected %s = [from, to]", what[0])
 			ok = false
 			break
 		}
@@ -399,9 +407,17 @@ func (r *reader) reading(b *block, name Name, date bool) (Reading, bool) {
 		q.From, ok1 = r.place(t.Exprs[0], date)
 		q.To, ok2 = r.place(t.Exprs[1], date)
 		if ok = ok1 && ok2; ok && q.To <= q.From {
-			r.fail(e.Range(), "an area that ends before it starts", "expected area = [from, to] with to above from")
+			r.fail(e.Range(), article(what[0])+" "+what[0]+" that ends before it starts", "expected %s = [from, to] with to above from", what[0])
 			ok = false
 		}
+	case "surely":
+		q.Kind = Surely
+		var n Name
+		if n, ok = r.wordOf(e, "rising or falling"); ok && n.Text != "rising" && n.Text != "falling" {
+			r.fail(n.Range, "surely "+n.Text, "expected rising or falling%s", expr.Suggest(n.Text, []string{"rising", "falling"}))
+			ok = false
+		}
+		q.Direction = n.Text
 	}
 	if d := b.word("direction", false, "rising or falling"); d.Text != "" {
 		if d.Text != "rising" && d.Text != "falling" {
@@ -410,7 +426,9 @@ func (r *reader) reading(b *block, name Name, date bool) (Reading, bool) {
 		if q.Kind != Crossing && q.Kind != Steepest {
 			r.fail(d.Range, "a direction with "+what[0], "expected it with crosses or steepest only")
 		}
-		q.Direction = d.Text
+		if q.Kind != Surely {
+			q.Direction = d.Text
+		}
 	}
 	if q.All = b.flag("all"); q.All && q.Kind != Crossing {
 		r.fail(b.attrs["all"].NameRange, "all with "+what[0], "expected it with crosses only")

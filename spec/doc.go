@@ -61,7 +61,7 @@
 //	  }
 //	  band {
 //	    level  = NUMBER          default 0.95; 0.5 to 0.9999
-//	    kind   = pointwise
+//	    kind   = pointwise or simultaneous   the latter holds over the whole grid at once
 //	    for    = curve or new_reading
 //	    weight = NUMBER          of the new reading; default: the mean weight
 //	  }
@@ -80,6 +80,10 @@
 //	    minimum  = true
 //	    steepest = true          with direction
 //	    area     = [PLACE, PLACE]
+//	    mean     = [PLACE, PLACE]   the area over its length
+//	    change   = [PLACE, PLACE]   the value at the second less that at the first
+//	    surely   = rising or falling   every stretch of the grid where the slope's
+//	                             simultaneous band excludes 0
 //	  }
 //	}
 //
@@ -117,7 +121,7 @@
 //
 //	export "NAME" {
 //	  of   = CURVE or CONTRAST   required
-//	  what = grid, fits, readings, evidence, residuals or coefficients   required; grid of a contrast
+//	  what = grid, fits, readings, evidence, residuals or coefficients   required; of a contrast grid or tests
 //	  file = PATH                required, ending in .csv, under the study's folder
 //	}
 //

@@ -115,7 +115,7 @@ func (r *reader) guard(b *block, name Name, kinds map[string]string) {
 	b.finish()
 }
 
-var exportKinds = []string{ExportGrid, ExportFits, ExportReadings, ExportEvidence, ExportResiduals, ExportCoefficients}
+var exportKinds = []string{ExportGrid, ExportFits, ExportReadings, ExportEvidence, ExportResiduals, ExportCoefficients, ExportTests}
 
 func (r *reader) export(b *block, name Name, kinds map[string]string) {
 	e := &Export{Name: name, Range: b.at}
@@ -128,9 +128,11 @@ func (r *reader) export(b *block, name Name, kinds map[string]string) {
 		r.fail(what.Range, fmt.Sprintf("unknown kind of export %q", what.Text), "expected one of %s%s", strings.Join(exportKinds, ", "), expr.Suggest(what.Text, slices.Clone(exportKinds)))
 	}
 	if r.study.ContrastByName(of.Text) != nil {
-		if what.Text != "" && what.Text != ExportGrid {
-			r.fail(what.Range, fmt.Sprintf("%s of a contrast", what.Text), "expected what = grid, for a contrast has no other table")
+		if what.Text != "" && what.Text != ExportGrid && what.Text != ExportTests {
+			r.fail(what.Range, fmt.Sprintf("%s of a contrast", what.Text), "expected what = grid or tests, for a contrast has no other table")
 		}
+	} else if what.Text == ExportTests {
+		r.fail(what.Range, "tests of something that is no contrast", "expected of = a contrast")
 	} else if of.Text != "" && r.study.CurveByName(of.Text) == nil {
 		r.wrongKind(of, kinds, "a curve or a contrast", "curve", "contrast")
 	} else if c := r.study.CurveByName(of.Text); c != nil && what.Text == ExportReadings && len(c.Readings) == 0 {

@@ -147,9 +147,10 @@ type Exception struct {
 
 // Band says which interval stands about the curve.
 type Band struct {
-	Level      float64 // 0.95 by default
-	NewReading bool    // for = new_reading
-	Weight     float64 // of the new reading; 0: the mean weight of the group
+	Level        float64 // 0.95 by default
+	Simultaneous bool    // kind = simultaneous: over the whole grid at once
+	NewReading   bool    // for = new_reading
+	Weight       float64 // of the new reading; 0: the mean weight of the group
 }
 
 // Grid says where the curve is tabulated. One of Points, Step, At is set.
@@ -170,6 +171,9 @@ const (
 	Minimum  = "minimum"
 	Steepest = "steepest"
 	Area     = "area"
+	Mean     = "mean"
+	Change   = "change"
+	Surely   = "surely"
 )
 
 // Reading is a number to take from every fit of a curve.
@@ -177,9 +181,9 @@ type Reading struct {
 	Name      Name
 	Kind      string
 	At        float64 // ValueAt, SlopeAt: x. Crossing: the level
-	Direction string  // "", "rising" or "falling": Crossing, Steepest
+	Direction string  // "", "rising" or "falling": Crossing, Steepest; one of the two: Surely
 	All       bool    // Crossing: every one instead of the first
-	From, To  float64 // Area
+	From, To  float64 // Area, Mean, Change
 }
 
 // Contrast is the difference of two groups' curves.
@@ -216,6 +220,7 @@ const (
 	ExportEvidence     = "evidence"
 	ExportResiduals    = "residuals"
 	ExportCoefficients = "coefficients"
+	ExportTests        = "tests" // of a contrast
 )
 
 // Export is a table written to a file.

@@ -106,6 +106,7 @@ curve "sugar" {
   }
   grid { step = 7 }
   reading "midwinter" { value_at = "2025-12-21" }
+  reading "sweetening" { surely = rising }
   reading "sweetest"  { maximum = true }
 }
 
@@ -129,7 +130,9 @@ curve "softening" {
     direction = falling
     all       = true
   }
-  reading "rate_90" { slope_at = 90 }
+  reading "rate_90"    { slope_at = 90 }
+  reading "winter"     { mean     = [60, 120] }
+  reading "winter_fall" { change  = [60, 120] }
 }
 
 contrast "store_effect" {
@@ -163,6 +166,11 @@ guard "store curves stand" {
   reason    = "the store curves are published; half a season must not pass for a whole one"
 }
 
+export "store_tests" {
+  of   = store_effect
+  what = tests                      # do the stores differ, and do they run parallel?
+  file = "out/store_effect_tests.csv"
+}
 export "grid" {
   of   = firmness
   what = grid

@@ -219,3 +219,26 @@ func expand(z, df float64) float64 {
 	v := 1 / df
 	return z + float64(v*(g1+float64(v*(g2+float64(v*(g3+float64(v*(g4+float64(v*g5)))))))))
 }
+
+// StudentTail returns P(T > t) for t >= 0 and Student's t with df > 0 degrees
+// of freedom.
+func StudentTail(t, df float64) float64 {
+	if !(t > 0) {
+		return 0.5
+	}
+	if df > 1e5 { // the normal's tail at the same point of the expansion in 1/df
+		df = 1e5
+	}
+	tail, _ := studentTail(t, df)
+	return tail
+}
+
+// StudentToNormal returns the standard normal deviate with the tail probability
+// of t >= 0 under Student's t with df degrees of freedom.
+func StudentToNormal(t, df float64) float64 {
+	p := StudentTail(t, df)
+	if p <= 0 {
+		return math.Inf(1)
+	}
+	return -NormalQuantile(p)
+}

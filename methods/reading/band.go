@@ -9,6 +9,7 @@ package reading
 
 import (
 	"math"
+	"slices"
 
 	"batten/methods/elementary"
 	"batten/methods/spline"
@@ -19,9 +20,11 @@ const Version = 1
 
 // Band says which interval stands about a curve.
 type Band struct {
-	Level      float64 // such as 0.95
-	NewReading bool    // for a new reading instead of the curve
-	Weight     float64 // of the new reading; 0: the mean weight of the rows
+	Level        float64 // such as 0.95
+	Simultaneous bool    // over the whole of [From, To] at once
+	From, To     float64 // equal: the stretch of the places asked for
+	NewReading   bool    // for a new reading instead of the curve
+	Weight       float64 // of the new reading; 0: the mean weight of the rows
 }
 
 // Point is a curve at one x with its interval.
@@ -33,12 +36,13 @@ type Point struct {
 // ruler measures intervals of one fit.
 type ruler struct {
 	f            *spline.Fit
+	level        float64
 	sigma, width float64 // width: t quantile times sigma
 	lo, hi       float64 // the observed range
 }
 
 func newRuler(f *spline.Fit, level float64) ruler {
-	r := ruler{f: f, sigma: scale(f), lo: f.Knots[0], hi: f.Knots[len(f.Knots)-1]}
+	r := ruler{f: f, level: level, sigma: scale(f), lo: f.Knots[0], hi: f.Knots[len(f.Knots)-1]}
 	if r.sigma > 0 {
 		r.width = float64(elementary.StudentQuantile(0.5*(1+level), f.NEDF) * r.sigma)
 	}
@@ -69,7 +73,8 @@ func (r *ruler) beyond(x float64) bool { return x < r.lo || x > r.hi }
 // The variance is sigma^2 S_ii/w_i at a data x, larger between data and
 // growing beyond the ends; NewReading adds sigma^2 over the weight. SE is its
 // root and the band's half-width Student's t quantile with n - edf degrees of
-// freedom times SE. Source: Wahba (1983), JRSSB 45:133.
+// freedom times SE; of a simultaneous band it is the critical value of the tube
+// formula times SE. Source: Wahba (1983), JRSSB 45:133.
 func Tabulate(f *spline.Fit, b Band, xs []float64, out []Point) []Point {
 	r := newRuler(f, b.Level)
 	extra := 0.0
@@ -79,6 +84,13 @@ func Tabulate(f *spline.Fit, b Band, xs []float64, out []Point) []Point {
 			w = f.Data.SumW / float64(f.Data.N)
 		}
 		extra = 1 / w
+	}
+	if b.Simultaneous && r.sigma > 0 && len(xs) > 0 {
+		lo, hi := b.From, b.To
+		if lo == hi {
+			lo, hi = slices.Min(xs), slices.Max(xs)
+		}
+		r.width = float64(r.simultaneous(lo, hi, b.Level) * r.sigma)
 	}
 	for _, x := range xs {
 		m := f.Posterior(x)
@@ -90,26 +102,203 @@ func Tabulate(f *spline.Fit, b Band, xs []float64, out []Point) []Point {
 	return out
 }
 
-// Difference tabulates a - b at xs. The groups are independent, so variances
-// add; the degrees of freedom of Student's t are those of Welch (1947),
-// Biometrika 34:28, and Satterthwaite (1946), Biometrics Bull. 2:110, taken at
-// each x.
-func Difference(a, b *spline.Fit, level float64, xs []float64) []Point {
-	ra, rb := newRuler(a, level), newRuler(b, level)
-	out := make([]Point, 0, len(xs))
-	for _, x := range xs {
+// Contrast is the difference of two curves, a - b, over the stretch that both
+// cover.
+type Contrast struct {
+	Grid []Point
+	Sure [][2]float64 // stretches of the grid where the simultaneous band excludes 0
+	None Test         // of no difference: a = b throughout
+	Same Test         // of parallel curves: a - b constant
+}
+
+// Test is a test about a difference of curves. P is NaN where it cannot be
+// made.
+type Test struct {
+	Largest float64 // the largest |difference| in units of its standard error
+	P       float64
+}
+
+// Difference tabulates a - b at xs with its band, and tests whether it is
+// nothing, or constant.
+//
+// The groups are independent, so variances add; the degrees of freedom of
+// Student's t are those of Welch (1947), Biometrika 34:28, and Satterthwaite
+// (1946), Biometrics Bull. 2:110, taken at each x, and the smallest of them for
+// what holds over all xs. Both tests take the largest difference over its
+// standard error: of a - b with the tube formula over the stretch of xs, so
+// that the test of no difference rejects just where the simultaneous band
+// excludes 0 somewhere; of a - b less its mean over xs with draws from the
+// posterior.
+func Difference(a, b *spline.Fit, band Band, xs []float64, seed int64, group string) Contrast {
+	ra, rb := newRuler(a, band.Level), newRuler(b, band.Level)
+	nan := math.NaN()
+	out := Contrast{None: Test{nan, nan}, Same: Test{nan, nan}}
+	if len(xs) == 0 {
+		return out
+	}
+	sa, sb := float64(ra.sigma*ra.sigma), float64(rb.sigma*rb.sigma)
+	df := make([]float64, len(xs))
+	largest, least := 0.0, math.Inf(1)
+	for i, x := range xs {
 		ma, mb := a.Posterior(x), b.Posterior(x)
-		va := float64(float64(ra.sigma*ra.sigma) * ma.VarValue)
-		vb := float64(float64(rb.sigma*rb.sigma) * mb.VarValue)
+		va, vb := float64(sa*ma.VarValue), float64(sb*mb.VarValue)
 		v := va + vb
 		d := ma.Value - mb.Value
-		h := 0.0
 		if v > 0 {
-			df := float64(v*v) / (float64(va*va)/a.NEDF + float64(vb*vb)/b.NEDF)
-			h = float64(elementary.StudentQuantile(0.5*(1+level), df) * math.Sqrt(v))
+			df[i] = float64(v*v) / (float64(va*va)/a.NEDF + float64(vb*vb)/b.NEDF)
+			largest = max(largest, math.Abs(d)/math.Sqrt(v))
+			least = min(least, df[i])
 		}
-		out = append(out, Point{X: x, Value: d, SE: math.Sqrt(v), Lower: d - h, Upper: d + h,
+		out.Grid = append(out.Grid, Point{X: x, Value: d, SE: math.Sqrt(v),
 			Slope: ma.Slope - mb.Slope, Extrapolated: ra.beyond(x) || rb.beyond(x)})
+	}
+	lo, hi := slices.Min(xs), slices.Max(xs)
+	simultaneous := 0.0
+	if !math.IsInf(least, 1) && hi > lo {
+		kappa := length(union(a.Knots, b.Knots), lo, hi, func(x float64) float64 {
+			ma, mb := a.Posterior(x), b.Posterior(x)
+			va, vb := float64(sa*ma.VarValue), float64(sb*mb.VarValue)
+			// the slope's variance where the difference is known
+			apart := ma.Cov/ma.VarValue - mb.Cov/mb.VarValue
+			v := va + vb
+			if v == 0 {
+				return 0
+			}
+			given := float64(sa*ma.SlopeGiven) + float64(sb*mb.SlopeGiven)
+			if va > 0 && vb > 0 {
+				given += float64(float64(va*vb/v*apart) * apart)
+			}
+			return math.Sqrt(given / v)
+		})
+		out.None = Test{largest, tube(largest, kappa, least)}
+		simultaneous = critical(kappa, least, band.Level)
+		out.Same = parallel(&ra, &rb, out.Grid, xs, least, seed, group)
+	}
+	for i := range out.Grid {
+		p := &out.Grid[i]
+		h := 0.0
+		switch {
+		case p.SE == 0:
+		case band.Simultaneous && simultaneous > 0:
+			h = float64(simultaneous * p.SE)
+		default:
+			h = float64(elementary.StudentQuantile(0.5*(1+band.Level), df[i]) * p.SE)
+		}
+		p.Lower, p.Upper = p.Value-h, p.Value+h
+	}
+	out.Sure = apart(out.Grid, simultaneous)
+	return out
+}
+
+// apart lists the stretches of the grid on which a difference lies more than c
+// standard errors to one side of 0.
+func apart(grid []Point, c float64) [][2]float64 {
+	var out [][2]float64
+	last := 0
+	for _, p := range grid {
+		side := 0
+		if math.Abs(p.Value) > float64(c*p.SE) {
+			side = sign(p.Value)
+		}
+		switch {
+		case side == 0:
+		case side == last:
+			out[len(out)-1][1] = p.X
+		default:
+			out = append(out, [2]float64{p.X, p.X})
+		}
+		last = side
+	}
+	return out
+}
+
+// parallel tests whether the difference is constant over xs.
+func parallel(ra, rb *ruler, grid []Point, xs []float64, df float64, seed int64, group string) Test {
+	n := len(xs)
+	pa, pb := ra.f.NewPath(xs), rb.f.NewPath(xs)
+	normal := elementary.Normals("parallel", seed, group)
+	va, vb, slope := make([]float64, n), make([]float64, n), make([]float64, n)
+	center := func(v []float64) {
+		mean := 0.0
+		for _, q := range v {
+			mean += q
+		}
+		mean /= float64(n)
+		for i := range v {
+			v[i] -= mean
+		}
+	}
+	draws := make([][]float64, Draws)
+	sd := make([]float64, n)
+	for k := range draws {
+		pa.Draw(normal, va, slope)
+		pb.Draw(normal, vb, slope)
+		d := make([]float64, n)
+		for i := range d {
+			d[i] = float64(ra.sigma*va[i]) - float64(rb.sigma*vb[i])
+		}
+		center(d)
+		for i, v := range d {
+			sd[i] += float64(v * v)
+		}
+		draws[k] = d
+	}
+	seen := make([]float64, n)
+	for i := range seen {
+		seen[i] = grid[i].Value
+		sd[i] = math.Sqrt(sd[i] / Draws)
+	}
+	center(seen)
+	top := func(v []float64) float64 {
+		t := 0.0
+		for i, q := range v {
+			if sd[i] > 0 {
+				t = max(t, math.Abs(q)/sd[i])
+			}
+		}
+		return t
+	}
+	largest := top(seen)
+	z := elementary.StudentToNormal(largest, df)
+	beyond := 0
+	for _, d := range draws {
+		if top(d) >= z {
+			beyond++
+		}
+	}
+	return Test{largest, float64(beyond+1) / (Draws + 1)}
+}
+
+// union merges two increasing lists.
+func union(a, b []float64) []float64 {
+	out := append(append([]float64(nil), a...), b...)
+	slices.Sort(out)
+	return slices.Compact(out)
+}
+
+// Holm adjusts p-values for their number by Holm's step-down method; NaN stays
+// and does not count. Source: Holm (1979), Scand. J. Stat. 6:65.
+func Holm(p []float64) []float64 {
+	var order []int
+	for i, v := range p {
+		if !math.IsNaN(v) {
+			order = append(order, i)
+		}
+	}
+	slices.SortStableFunc(order, func(i, j int) int {
+		switch {
+		case p[i] < p[j]:
+			return -1
+		case p[i] > p[j]:
+			return 1
+		}
+		return 0
+	})
+	out := append([]float64(nil), p...)
+	least := 0.0
+	for k, i := range order {
+		least = max(least, min(1, float64(float64(len(order)-k)*p[i])))
+		out[i] = least
 	}
 	return out
 }

@@ -3,6 +3,7 @@ package reading
 import (
 	"fmt"
 	"math"
+	"strings"
 
 	"batten/methods/spline"
 )
@@ -16,25 +17,34 @@ const (
 	Minimum  = "minimum"
 	Steepest = "steepest"
 	Area     = "area"
+	Mean     = "mean"
+	Change   = "change"
+	Surely   = "surely"
 )
 
 // Ask is what to take from a curve.
 type Ask struct {
 	Kind      string
 	At        float64 // Value, Slope: x; Crossing: the level
-	Direction string  // "", "rising", "falling": Crossing, Steepest
+	Direction string  // "", "rising", "falling": Crossing, Steepest; one of the two: Surely
 	All       bool    // Crossing: every one, not the first alone
-	From, To  float64 // Area
+	From, To  float64 // Area, Mean, Change
+
+	Grid  []float64 // Surely, Steepest: where slopes are compared
+	Seed  int64     // of draws from the posterior
+	Group string    // the fit's name, which draws depend on
 }
 
 // Result is one number with its interval. NaN stands for none. The end of an
 // interval that is open is infinite, and Note says why.
 //
-//	value, slope, area     At: x (area: its start); Value in their own units
+//	value, slope, area,    At: x (of a stretch: its start); Value in their own
+//	mean, change           units. change is g(To) - g(From)
 //	crossing               At: the level; Value: the place
 //	maximum, minimum,      At: the place; Value: height or slope there
 //	steepest
 //	maximum_at, ...        At: height or slope; Value: the place
+//	surely_rising, ...     Lower, Upper: the ends of the stretch
 type Result struct {
 	Kind                    string
 	At, Value, Lower, Upper float64
@@ -60,22 +70,38 @@ func Take(f *spline.Fit, level float64, a Ask) []Result {
 	case Slope:
 		m := f.Posterior(a.At)
 		return []Result{r.number(Slope, a.At, m.Slope, m.VarSlope)}
-	case Area:
-		v, variance := f.Area(a.From, a.To)
-		h := r.half(variance)
-		out := Result{Kind: Area, At: a.From, Value: v, Lower: v - h, Upper: v + h}
-		if r.beyond(a.From) || r.beyond(a.To) {
-			out.Extrapolated, out.Note = true, "partly beyond the data"
-		}
-		return []Result{out}
+	case Area, Mean, Change:
+		return []Result{r.over(a)}
+	case Surely:
+		return r.surely(a)
 	case Crossing:
 		return r.crossings(a)
 	case Maximum, Minimum:
 		return r.extreme(a.Kind)
 	case Steepest:
-		return r.steepest(a.Direction)
+		return r.steepest(a)
 	}
 	panic(fmt.Sprintf("reading: unknown kind %q", a.Kind))
+}
+
+// over reads a stretch: the area under it, its mean, or the change along it.
+func (r *ruler) over(a Ask) Result {
+	var v, variance float64
+	switch a.Kind {
+	case Change:
+		v, variance = r.f.Change(a.From, a.To)
+	default:
+		v, variance = r.f.Area(a.From, a.To)
+		if l := a.To - a.From; a.Kind == Mean {
+			v, variance = v/l, variance/float64(l*l)
+		}
+	}
+	h := r.half(variance)
+	out := Result{Kind: a.Kind, At: a.From, Value: v, Lower: v - h, Upper: v + h}
+	if r.beyond(a.From) || r.beyond(a.To) {
+		out.Extrapolated, out.Note = true, "partly beyond the data"
+	}
+	return out
 }
 
 func (r *ruler) number(kind string, x, v, variance float64) Result {
@@ -107,11 +133,58 @@ func (r *ruler) crossings(a Ask) []Result {
 			break
 		}
 	}
+	r.elsewhere(a.At, out)
 	if out == nil {
 		nan := math.NaN()
 		out = []Result{{Kind: Crossing, At: a.At, Value: nan, Lower: nan, Upper: nan, Note: None}}
 	}
 	return out
+}
+
+// elsewhere notes at the first crossing where else the band holds the level:
+// the set of places where the curve may cross is then in several pieces.
+func (r *ruler) elsewhere(level float64, found []Result) {
+	if len(found) == 0 || r.width == 0 {
+		return
+	}
+	holds := func(x float64) bool {
+		m := r.f.Posterior(x)
+		return math.Abs(m.Value-level) <= r.half(m.VarValue)
+	}
+	others := 0
+	lower, open := 0.0, false
+	close := func(upper float64) {
+		open = false
+		for _, f := range found {
+			if f.Value >= lower && f.Value <= upper {
+				return
+			}
+		}
+		others++
+	}
+	k := r.f.Knots
+	for j := 0; j+1 < len(k); j++ {
+		for q := 0; q < 4; q++ {
+			x := k[j] + float64(0.25*float64(q)*(k[j+1]-k[j]))
+			switch in := holds(x); {
+			case in && !open:
+				lower, open = x, true
+			case !in && open:
+				close(x)
+			}
+		}
+	}
+	if open {
+		close(r.hi)
+	}
+	if others == 0 {
+		return
+	}
+	note := fmt.Sprintf("the band holds %g over another stretch too", level)
+	if others > 1 {
+		note = fmt.Sprintf("the band holds %g over %d other stretches too", level, others)
+	}
+	found[0].Note = strings.TrimPrefix(found[0].Note+"; "+note, "; ")
 }
 
 // stretch finds the connected stretch about x on which a condition holds,
@@ -227,7 +300,8 @@ func (r *ruler) extreme(kind string) []Result {
 }
 
 // steepest finds the largest slope: by size, or the largest rise or fall.
-func (r *ruler) steepest(direction string) []Result {
+func (r *ruler) steepest(a Ask) []Result {
+	direction := a.Direction
 	best, at := math.Inf(-1), r.lo
 	for _, x := range inflections(&r.f.Curve) {
 		_, s, _ := r.f.At(x)
@@ -249,10 +323,17 @@ func (r *ruler) steepest(direction string) []Result {
 			{Kind: Steepest + "_at", At: nan, Value: nan, Lower: nan, Upper: nan, Note: None}}
 	}
 	slope := r.number(Steepest, at, m.Slope, m.VarSlope)
-	place := Result{Kind: Steepest + "_at", At: m.Slope, Value: at, Lower: math.NaN(), Upper: math.NaN(),
-		Note: "no interval is given for this place"}
+	place := Result{Kind: Steepest + "_at", At: m.Slope, Value: at, Lower: math.NaN(), Upper: math.NaN(), Note: "no interval is given for this place"}
+	var ok bool
+	if place.Lower, place.Upper, ok = r.steepestPlace(a); ok {
+		place.Note = ""
+		place.Lower, place.Upper = min(place.Lower, at), max(place.Upper, at)
+	} else {
+		place.Lower, place.Upper = math.NaN(), math.NaN()
+	}
 	if at == r.lo || at == r.hi {
-		slope.Note, place.Note = AtEnd, AtEnd+"; no interval is given for this place"
+		slope.Note = AtEnd
+		place.Note = strings.TrimPrefix(place.Note+"; "+AtEnd, "; ")
 	}
 	return []Result{slope, place}
 }

@@ -155,7 +155,7 @@ func TestExactData(t *testing.T) {
 func TestDifference(t *testing.T) {
 	a, b := hump(t, 40, 4), hump(t, 25, 5)
 	xs := []float64{1, 4, 9}
-	d, e := Difference(a, b, 0.95, xs), Difference(b, a, 0.95, xs)
+	d, e := Difference(a, b, Band{Level: 0.95}, xs, 1, "g").Grid, Difference(b, a, Band{Level: 0.95}, xs, 1, "g").Grid
 	pa, pb := Tabulate(a, Band{Level: 0.95}, xs, nil), Tabulate(b, Band{Level: 0.95}, xs, nil)
 	for i := range xs {
 		close(t, "difference", d[i].Value, pa[i].Value-pb[i].Value, 1e-12)
@@ -184,13 +184,16 @@ func TestKnownBytes(t *testing.T) {
 			put(p.Value, p.SE, p.Lower, p.Upper, p.Slope)
 		}
 		for _, a := range []Ask{{Kind: Value, At: 2}, {Kind: Slope, At: 2}, {Kind: Crossing, At: 20, All: true}, {Kind: Maximum}, {Kind: Minimum},
-			{Kind: Area, From: -1, To: 7}, {Kind: Steepest}} {
+			{Kind: Area, From: -1, To: 7}, {Kind: Steepest, Grid: grid(0, 10, 21), Seed: 3, Group: "g"}, {Kind: Mean, From: 1, To: 3},
+			{Kind: Change, From: 1, To: 3}, {Kind: Surely, Direction: "rising", Grid: grid(0, 10, 21), Seed: 3, Group: "g"}} {
 			for _, r := range Take(f, 0.95, a) {
 				put(r.At, r.Value, r.Lower, r.Upper)
 			}
 		}
+		c := Difference(f, hump(t, 31, seed+50), Band{Level: 0.9, Simultaneous: true}, grid(1, 9, 15), 4, "g")
+		put(c.None.P, c.None.Largest, c.Same.P, c.Same.Largest, c.Grid[3].Lower)
 	}
-	const want, version = "ef4e1a9f070714fa59e11b155be79035", 1
+	const want, version = "fa3bceddb2bcf23ccfa8e6d362a4893c", 1
 	got := hex.EncodeToString(h.Sum(nil))[:32]
 	switch {
 	case got != want && Version == version:

@@ -129,8 +129,9 @@ func (f *Fit) RowLeftOut(k int) float64 {
 }
 
 // Moments are the posterior of value and slope at one x: means in the unit of
-// y (and y over x), variances over sigma^2.
-type Moments struct{ Value, Slope, VarValue, VarSlope, Cov float64 }
+// y (and y over x), variances over sigma^2. SlopeGiven is the variance of the
+// slope where the value is known.
+type Moments struct{ Value, Slope, VarValue, VarSlope, Cov, SlopeGiven float64 }
 
 // Posterior returns value and slope at any x with their variances, from the
 // posterior of g as an integrated Wiener process with a diffuse start: at a
@@ -145,6 +146,7 @@ func (f *Fit) Posterior(x float64) Moments {
 	one := func(s state) { // one filter alone knows of x
 		out.VarValue = 1 / s.lam
 		out.VarSlope = s.c + float64(float64(s.b*s.b)/s.lam)
+		out.SlopeGiven = s.c
 		out.Cov = s.b / s.lam
 	}
 	switch {
@@ -187,8 +189,10 @@ func (f *Fit) atKnot(i int, out *Moments) {
 	switch i {
 	case 0:
 		out.VarValue, out.VarSlope, out.Cov = v, bw.c+float64(float64(bw.b*bw.b)*v), -float64(bw.b*v)
+		out.SlopeGiven = bw.c
 	case len(f.Knots) - 1:
 		out.VarValue, out.VarSlope, out.Cov = v, fw.c+float64(float64(fw.b*fw.b)*v), float64(fw.b*v)
+		out.SlopeGiven = fw.c
 	default:
 		both(fw, bw, 1/(fw.c+bw.c), v, out)
 	}
@@ -198,6 +202,7 @@ func (f *Fit) atKnot(i int, out *Moments) {
 func both(fw, bw *state, kap, v float64, out *Moments) {
 	beta := float64((float64(bw.c*fw.b) - float64(fw.c*bw.b)) * kap)
 	out.VarValue = v
-	out.VarSlope = float64(float64(fw.c*bw.c)*kap) + float64(float64(beta*beta)*v)
+	out.SlopeGiven = float64(float64(fw.c*bw.c) * kap)
+	out.VarSlope = out.SlopeGiven + float64(float64(beta*beta)*v)
 	out.Cov = float64(beta * v)
 }
