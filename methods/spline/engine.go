@@ -72,7 +72,10 @@ const (
 
 // Workspace is the memory of fits. The zero value is ready; it grows as it is
 // used and must not be shared between goroutines.
-type Workspace struct{ forward, backward []state }
+type Workspace struct {
+	forward, backward []state
+	lanes             lanes // of Scores4 and Criteria4
+}
 
 // Criteria is what one lambda gives: the scores a rule may minimise.
 type Criteria struct {
