@@ -17,6 +17,7 @@ require (
 	github.com/yuin/goldmark v1.8.7
 	github.com/zclconf/go-cty v1.20.0
 	golang.org/x/sync v0.25.0
+	golang.org/x/sys v0.50.0
 	golang.org/x/term v0.48.0
 	gonum.org/v1/gonum v0.17.0
 	gonum.org/v1/plot v0.17.0
@@ -53,7 +54,6 @@ require (
 	github.com/x448/float16 v0.8.4 // indirect
 	golang.org/x/image v0.30.0 // indirect
 	golang.org/x/mod v0.29.0 // indirect
-	golang.org/x/sys v0.50.0 // indirect
 	golang.org/x/text v0.31.0 // indirect
 	golang.org/x/tools v0.38.0 // indirect
 )

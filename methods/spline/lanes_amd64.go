@@ -65,13 +65,17 @@ func combineLanesTiedRough(fw, bw *state4, x, y, w *float64, q *[4]float64, lo, 
 // stride bounds the steps of one call: the scheduler cannot interrupt a kernel.
 const stride = 4096
 
+// mostKnots bounds the kernel's memory. Beyond it the work is bound by memory
+// anyway, and the gain is small.
+const mostKnots = 1 << 17
+
 // evaluateLanes is evaluate for four lambdas, or false where the processor
 // lacks the vectors.
 func (ws *Workspace) evaluateLanes(d *Data, lambda *[4]float64, out *[4]Criteria, reml bool) bool {
-	if !cpu.X86.HasAVX2 {
+	m := len(d.X)
+	if !cpu.X86.HasAVX2 || m > mostKnots {
 		return false
 	}
-	m := len(d.X)
 	if m < MinDistinct {
 		panic("spline: fewer than 3 distinct x")
 	}
