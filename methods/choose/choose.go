@@ -11,6 +11,7 @@ package choose
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"batten/methods/spline"
 )
@@ -120,6 +121,7 @@ func CausedByData(err error) bool {
 // Lambda chooses lambda for d by rule r.
 func Lambda(ws *spline.Workspace, d *spline.Data, r Rule) (*Evidence, error) {
 	s := newSearch(ws, d, r)
+	defer s.done()
 	switch r.Name {
 	case FixedLambda:
 		if !(r.Lambda > 0) {
@@ -170,7 +172,7 @@ func (s *search) minimum() (*Evidence, error) {
 func (s *search) fixed(lambda float64) *Evidence {
 	c := s.atLambda(lambda).Candidate
 	e := &Evidence{Rule: s.rule.Name, Chosen: c, Candidates: []Candidate{c}}
-	e.Flags = s.endFlags(c, "")
+	e.Flags = s.endFlags(c, inner)
 	return e
 }
 
@@ -182,29 +184,38 @@ func Others(ws *spline.Workspace, d *spline.Data, r Rule, e *Evidence) []Other {
 	var shared []point
 	covers := len(e.Candidates) > 4 && r.DFAtLeast == 0 && r.DFAtMost == 0 && !(r.Inflate > 1) && r.Name != AICc && r.Name != ResidualTarget
 	same := covers && !r.OneSE && r.Follow == ""
+	if covers {
+		shared = pointsOf(e.Candidates)
+	}
 	for _, name := range Compared {
 		if same && name == r.Name {
 			out = append(out, Other{name, e.Chosen.Lambda, e.Chosen.EDF, e.Chosen.Score})
 			continue
 		}
-		s := newSearch(ws, d, Rule{Name: name})
-		if shared == nil {
-			if covers {
-				shared = pointsOf(e.Candidates)
-			} else if err := s.walk(); err == nil {
-				shared = s.lattice
-			} else {
-				continue // too few rows for this rule; another may do
-			}
+		if o, ok := other(ws, d, name, &shared); ok {
+			out = append(out, o)
 		}
-		if !s.adopt(shared) {
-			continue
-		}
-		best := s.lattice[len(s.lattice)-1]
-		if !s.perfect() {
-			best = s.best(s.minima(true))
-		}
-		out = append(out, Other{name, best.Lambda, best.EDF, best.Score})
 	}
 	return out
+}
+
+// other is what one rule would have taken. The first to walk leaves its
+// lattice for the others.
+func other(ws *spline.Workspace, d *spline.Data, name string, shared *[]point) (Other, bool) {
+	s := newSearch(ws, d, Rule{Name: name})
+	defer s.done()
+	if *shared == nil {
+		if s.walk() != nil {
+			return Other{}, false // too few rows for this rule; another may do
+		}
+		*shared = slices.Clone(s.lattice)
+	}
+	if !s.adopt(*shared) {
+		return Other{}, false
+	}
+	best := s.lattice[len(s.lattice)-1]
+	if !s.perfect() {
+		best = s.best(s.minima(true))
+	}
+	return Other{name, best.Lambda, best.EDF, best.Score}, true
 }

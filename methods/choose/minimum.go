@@ -73,19 +73,20 @@ func (s *search) guess(k int) float64 {
 // inside it, however shallow.
 func (s *search) endMinimum(k int) point {
 	l := s.lattice
-	inner := 1
+	inside := 1
 	if k > 0 {
-		inner = k - 1
+		inside = k - 1
 	}
 	step := 0.02
 	if k > 0 {
 		step = -step
 	}
-	two := s.points(0.5*(l[k].u+l[inner].u), l[k].u+step)
+	var two [2]point
+	s.points(two[:0], 0.5*(l[k].u+l[inside].u), l[k].u+step)
 	mid := two[0]
 	low, next := two[1], mid // is there a dip right behind the bound?
 	if mid.Score < low.Score {
-		low, next = mid, l[inner]
+		low, next = mid, l[inside]
 	}
 	if low.Score < l[k].Score {
 		if k == 0 {

@@ -96,7 +96,7 @@ func (s *search) target() (*Evidence, error) {
 		s.lattice = append(s.lattice, line)
 	case k == 0: // even the roughest lies farther from the data
 		chosen = l[0]
-		chosen.end = "rough"
+		chosen.end = rough
 		e.Flags = append(e.Flags, TargetUnreached)
 	case k == len(l):
 		chosen = l[len(l)-1]
@@ -110,7 +110,7 @@ func (s *search) target() (*Evidence, error) {
 	}
 	s.record(e)
 	e.Chosen = chosen.Candidate
-	e.Minima = []Minimum{{Candidate: chosen.Candidate, End: chosen.end, Chosen: true}}
+	e.Minima = []Minimum{{Candidate: chosen.Candidate, End: chosen.end.String(), Chosen: true}}
 	e.Flags = append(e.Flags, s.endFlags(chosen.Candidate, chosen.end)...)
 	return e, nil
 }

@@ -1,9 +1,11 @@
 package choose
 
 import (
+	"cmp"
 	"fmt"
 	"math"
-	"sort"
+	"slices"
+	"sync"
 
 	"batten/methods/elementary"
 	"batten/methods/spline"
@@ -36,6 +38,7 @@ type search struct {
 	scored  int // held-out rows that are scored
 	fit     spline.Fit
 
+	walked []point   // all that the walk tried
 	lambda []float64 // of a batch
 	out    []spline.Criteria
 }
@@ -44,15 +47,37 @@ type search struct {
 type point struct {
 	u float64 // log lambda
 	Candidate
-	end string
+	end end
 }
 
+// end tells which end of the range a point is.
+type end int8
+
+const (
+	inner end = iota
+	rough
+	smooth
+)
+
+func (e end) String() string { return [...]string{"", "rough", "smooth"}[e] }
+
+// pool keeps the memory of searches: many small groups are fitted in a row.
+var pool = sync.Pool{New: func() any { return &search{} }}
+
 func newSearch(ws *spline.Workspace, d *spline.Data, r Rule) *search {
-	s := &search{ws: ws, d: d, rule: r, inflate: r.Inflate}
+	s := pool.Get().(*search)
+	*s = search{ws: ws, d: d, rule: r, inflate: r.Inflate,
+		lattice: s.lattice[:0], walked: s.walked[:0], lambda: s.lambda[:0], out: s.out[:0], fit: s.fit}
 	if s.inflate == 0 {
 		s.inflate = 1
 	}
 	return s
+}
+
+// done gives the search's memory back. Nothing of it may be in use.
+func (s *search) done() {
+	s.ws, s.d, s.rule, s.folds = nil, nil, Rule{}, nil
+	pool.Put(s)
 }
 
 // criteria evaluates everything at several log lambdas.
@@ -94,16 +119,18 @@ func (s *search) candidate(c *spline.Criteria) Candidate {
 	return Candidate{Lambda: c.Lambda, EDF: c.EDF, RSS: c.RSS, GCV: c.GCV(1), LOOCV: c.LOOCV, REML: c.REML, Score: s.pick(c)}
 }
 
-// points are candidates at several places.
-func (s *search) points(us ...float64) []point {
-	out := make([]point, len(us))
+// points appends candidates at several places to out.
+func (s *search) points(out []point, us ...float64) []point {
 	for i, c := range s.criteria(us) {
-		out[i] = point{u: us[i], Candidate: s.candidate(&c)}
+		out = append(out, point{u: us[i], Candidate: s.candidate(&c)})
 	}
 	return out
 }
 
-func (s *search) at(u float64) point { return s.points(u)[0] }
+func (s *search) at(u float64) point {
+	c := s.ws.Criteria(s.d, elementary.Exp(u))
+	return point{u: u, Candidate: s.candidate(&c)}
+}
 
 // atLambda is a candidate at lambda itself, which may be +Inf.
 func (s *search) atLambda(lambda float64) point {
@@ -151,60 +178,90 @@ func (s *search) walk() error {
 	}
 	u0 := s.middle()
 	var us [lanes]float64
-	batch := func(from float64) []point { // the next steps away from the middle
+	batch := func(all []point, from float64) []point { // the next steps away from the middle
 		for i := range us {
 			us[i] = u0 + float64((from+float64(i))*spacing)
 		}
-		return s.points(us[:]...)
+		return s.points(all, us[:]...)
 	}
-	all := batch(-1)
-	for k := 1.0 - 1 + lanes - 1; all[len(all)-1].EDF > s.lo && k < farthest; k += lanes {
-		all = append(all, batch(k)...)
+	all := batch(s.walked[:0], -1)
+	last := func() *point { return &all[len(all)-1] }
+	for k := lanes - 1.0; last().EDF > s.lo && k < farthest; k += lanes {
+		all = batch(all, k)
 	}
-	for k := -1.0 - lanes; all[0].EDF < s.hi && -k < farthest; k -= lanes {
-		all = append(batch(k), all...)
+	low := len(all)
+	for k, least := -1.0-lanes, all[0].EDF; least < s.hi && -k < farthest; k -= lanes {
+		all = batch(all, k)
+		least = all[len(all)-lanes].EDF
 	}
-	s.lattice = s.lattice[:0]
-	rough := s.bound(all, s.hi)
-	rough.end = "rough"
-	s.lattice = append(s.lattice, rough)
+	if len(all) > low {
+		slices.SortFunc(all, func(a, b point) int { return cmp.Compare(a.u, b.u) })
+	}
+	s.walked = all
+	ends := s.ends(all)
+	s.lattice = append(s.lattice[:0], ends[0])
 	for _, p := range all {
 		if p.EDF > s.lo && p.EDF < s.hi {
 			s.lattice = append(s.lattice, p)
 		}
 	}
-	smooth := s.bound(all, s.lo)
-	smooth.end = "smooth"
-	s.lattice = append(s.lattice, smooth)
+	s.lattice = append(s.lattice, ends[1])
 	return nil
+}
+
+// ends finds the places where edf is at the bounds of the range.
+func (s *search) ends(all []point) [2]point {
+	bounds := [2]float64{s.hi, s.lo}
+	var us [2]float64
+	for i, df := range bounds {
+		us[i] = s.reach(all, df)
+	}
+	var out [2]point
+	s.points(out[:0], us[:]...)
+	for i, df := range bounds {
+		if math.Abs(out[i].EDF-df) > loosely*df {
+			out[i] = s.bound(all, df)
+		}
+		out[i].end = []end{rough, smooth}[i]
+	}
+	return out
+}
+
+// reach places edf = df by the polynomial through the points about it.
+func (s *search) reach(all []point, df float64) float64 {
+	for k := 0; k+1 < len(all); k++ {
+		if !(all[k].EDF >= df && all[k+1].EDF <= df) {
+			continue
+		}
+		j := min(max(k-1, 0), len(all)-4)
+		var b [4]float64
+		for i := range b {
+			b[i] = s.bend(all[j+i].EDF, df)
+		}
+		u := 0.0
+		for i := range b {
+			part := all[j+i].u
+			for h := range b {
+				if h != i {
+					part *= b[h] / (b[h] - b[i])
+				}
+			}
+			u += part
+		}
+		if u >= all[k].u && u <= all[k+1].u {
+			return u
+		}
+		return all[k].u
+	}
+	return all[0].u
 }
 
 // bound finds the place where edf is df, between two points of the walk.
 func (s *search) bound(all []point, df float64) point {
 	for k := 0; k+1 < len(all); k++ {
-		a, b := &all[k], &all[k+1]
-		if !(a.EDF >= df && b.EDF <= df) {
-			continue
+		if a, b := &all[k], &all[k+1]; a.EDF >= df && b.EDF <= df {
+			return s.at(s.root(df, a.u, a.EDF, b.u, b.EDF, loosely))
 		}
-		// first by a polynomial through the points about it
-		if j := min(max(k-1, 0), len(all)-4); j >= 0 {
-			u := 0.0
-			for i := j; i < j+4; i++ {
-				part := all[i].u
-				for h := j; h < j+4; h++ {
-					if h != i {
-						part *= s.bend(all[h].EDF, df) / (s.bend(all[h].EDF, df) - s.bend(all[i].EDF, df))
-					}
-				}
-				u += part
-			}
-			if u >= a.u && u <= b.u {
-				if p := s.at(u); math.Abs(p.EDF-df) <= loosely*df {
-					return p
-				}
-			}
-		}
-		return s.at(s.root(df, a.u, a.EDF, b.u, b.EDF, loosely))
 	}
 	// the walk ended before it: the data's range of edf ends here
 	if all[0].EDF < df {
@@ -299,9 +356,9 @@ func (s *search) adopt(lattice []point) bool {
 	if s.bounds() != nil {
 		return false
 	}
-	s.lattice = s.lattice[:0:0]
+	s.lattice = s.lattice[:0]
 	for _, p := range lattice {
-		if p.end == "" && (p.EDF > s.hi || p.EDF < s.lo) || p.EDF > float64(s.d.N)-2.5 && s.rule.Name == AICc {
+		if p.end == inner && (p.EDF > s.hi || p.EDF < s.lo) || p.EDF > float64(s.d.N)-2.5 && s.rule.Name == AICc {
 			continue
 		}
 		switch s.rule.Name {
@@ -327,7 +384,7 @@ func pointsOf(c []Candidate) []point {
 		out[k] = point{u: elementary.Log(c[i].Lambda), Candidate: c[i]}
 	}
 	if len(out) > 0 {
-		out[0].end, out[len(out)-1].end = "rough", "smooth"
+		out[0].end, out[len(out)-1].end = rough, smooth
 	}
 	return out
 }
@@ -354,7 +411,7 @@ func (s *search) look() {
 		return
 	}
 	s.lattice = append(s.lattice, found...)
-	sort.Slice(s.lattice, func(i, j int) bool { return s.lattice[i].u < s.lattice[j].u })
+	slices.SortFunc(s.lattice, func(a, b point) int { return cmp.Compare(a.u, b.u) })
 }
 
 // automatic minimises the rule's criterion over the range of edf.
@@ -373,28 +430,28 @@ func (s *search) automatic() (*Evidence, error) {
 	best := s.best(found)
 	// The candidates are the lattice and the refined minima.
 	for _, p := range found {
-		if p.end == "" {
+		if p.end == inner {
 			s.lattice = append(s.lattice, p)
 		}
 	}
 	s.record(e)
-	sort.SliceStable(found, func(i, j int) bool {
-		if found[i].u == best.u || found[j].u == best.u {
-			return found[i].u == best.u && found[j].u != best.u
+	slices.SortStableFunc(found, func(a, b point) int {
+		if first := cmp.Compare(b2i(b.u == best.u), b2i(a.u == best.u)); first != 0 {
+			return first
 		}
-		return found[i].Score < found[j].Score
+		return cmp.Compare(a.Score, b.Score)
 	})
 	e.Chosen = best.Candidate
-	end := best.end
+	at := best.end
 	if s.rule.OneSE {
 		if c, ok := s.oneSE(best.Candidate, e.Candidates); ok {
-			e.Chosen, end = c, ""
+			e.Chosen, at = c, inner
 		}
 	}
 	for _, p := range found {
-		e.Minima = append(e.Minima, Minimum{Candidate: p.Candidate, End: p.end, Chosen: p.Lambda == e.Chosen.Lambda})
+		e.Minima = append(e.Minima, Minimum{Candidate: p.Candidate, End: p.end.String(), Chosen: p.Lambda == e.Chosen.Lambda})
 	}
-	e.Flags = append(e.Flags, s.endFlags(e.Chosen, end)...)
+	e.Flags = append(e.Flags, s.endFlags(e.Chosen, at)...)
 	if len(found) > 1 && s.within(0.01, found[0].Score, found[1].Score) {
 		e.Flags = append(e.Flags, SeveralMinima)
 	}
@@ -403,7 +460,8 @@ func (s *search) automatic() (*Evidence, error) {
 
 // record lists the lattice as candidates, in order of edf.
 func (s *search) record(e *Evidence) {
-	sort.SliceStable(s.lattice, func(i, j int) bool { return s.lattice[i].u > s.lattice[j].u })
+	slices.SortStableFunc(s.lattice, func(a, b point) int { return cmp.Compare(b.u, a.u) })
+	e.Candidates = make([]Candidate, 0, len(s.lattice))
 	for k, p := range s.lattice {
 		if k > 0 && p.u == s.lattice[k-1].u {
 			continue
@@ -414,11 +472,11 @@ func (s *search) record(e *Evidence) {
 
 // endFlags says of a choice whether it is the null space, or an end of the
 // range.
-func (s *search) endFlags(c Candidate, end string) []string {
+func (s *search) endFlags(c Candidate, at end) []string {
 	switch {
 	case c.EDF <= float64(s.d.Null())+leastAbove+1e-3:
 		return []string{StraightLine}
-	case end != "":
+	case at != inner:
 		return []string{AtBound}
 	}
 	return nil
@@ -432,4 +490,11 @@ func (s *search) perfect() bool {
 	}
 	c := s.ws.Scores(s.d, math.Inf(1))
 	return c.RSS <= 1e-28*scale
+}
+
+func b2i(b bool) int {
+	if b {
+		return 1
+	}
+	return 0
 }

@@ -17,6 +17,7 @@ const (
 // lambda, or of edf.
 func Reach(ws *spline.Workspace, d *spline.Data, r Rule, what string) (lo, hi float64, err error) {
 	s := newSearch(ws, d, r)
+	defer s.done()
 	if err := s.prepare(); err != nil {
 		return 0, 0, err
 	}
@@ -31,6 +32,7 @@ func Reach(ws *spline.Workspace, d *spline.Data, r Rule, what string) (lo, hi fl
 // log likelihood once.
 func Terms(ws *spline.Workspace, d *spline.Data, r Rule, what string, at, into []float64) error {
 	s := newSearch(ws, d, r)
+	defer s.done()
 	if err := s.prepare(); err != nil {
 		return err
 	}
@@ -146,7 +148,7 @@ func (s *search) follow() (*Evidence, error) {
 		e.Minima[i].Chosen = false
 	}
 	e.Candidates = insert(e.Candidates, e.Chosen)
-	e.Flags = s.endFlags(e.Chosen, "")
+	e.Flags = s.endFlags(e.Chosen, inner)
 	return e, nil
 }
 
