@@ -39,6 +39,7 @@ type search struct {
 	fit     spline.Fit
 
 	walked []point   // all that the walk tried
+	line   float64   // RSS of the curve without roughness; NaN: not known yet
 	lambda []float64 // of a batch
 	out    []spline.Criteria
 }
@@ -66,7 +67,7 @@ var pool = sync.Pool{New: func() any { return &search{} }}
 
 func newSearch(ws *spline.Workspace, d *spline.Data, r Rule) *search {
 	s := pool.Get().(*search)
-	*s = search{ws: ws, d: d, rule: r, inflate: r.Inflate,
+	*s = search{ws: ws, d: d, rule: r, inflate: r.Inflate, line: math.NaN(),
 		lattice: s.lattice[:0], walked: s.walked[:0], lambda: s.lambda[:0], out: s.out[:0], fit: s.fit}
 	if s.inflate == 0 {
 		s.inflate = 1
@@ -84,7 +85,7 @@ func (s *search) done() {
 func (s *search) criteria(us []float64) []spline.Criteria {
 	s.lambda, s.out = s.lambda[:0], s.out[:0]
 	for _, u := range us {
-		s.lambda = append(s.lambda, elementary.Exp(u))
+		s.lambda = append(s.lambda, elementary.Exp(u)) // +Inf of +Inf
 		s.out = append(s.out, spline.Criteria{})
 	}
 	s.ws.CriteriaAt(s.d, s.lambda, s.out)
@@ -189,15 +190,19 @@ func (s *search) walk() error {
 	for k := lanes - 1.0; last().EDF > s.lo && k < farthest; k += lanes {
 		all = batch(all, k)
 	}
-	low := len(all)
+	high := len(all)
 	for k, least := -1.0-lanes, all[0].EDF; least < s.hi && -k < farthest; k -= lanes {
 		all = batch(all, k)
 		least = all[len(all)-lanes].EDF
 	}
-	if len(all) > low {
-		slices.SortFunc(all, func(a, b point) int { return cmp.Compare(a.u, b.u) })
-	}
 	s.walked = all
+	s.lattice = s.lattice[:0] // in order: the batches down come last first
+	for k := len(all) - lanes; k >= high; k -= lanes {
+		s.lattice = append(s.lattice, all[k:k+lanes]...)
+	}
+	s.lattice = append(s.lattice, all[:high]...)
+	s.walked, s.lattice = s.lattice, s.walked
+	all = s.walked
 	ends := s.ends(all)
 	s.lattice = append(s.lattice[:0], ends[0])
 	for _, p := range all {
@@ -212,19 +217,20 @@ func (s *search) walk() error {
 // ends finds the places where edf is at the bounds of the range.
 func (s *search) ends(all []point) [2]point {
 	bounds := [2]float64{s.hi, s.lo}
-	var us [2]float64
+	us := [3]float64{0, 0, math.Inf(1)} // and the curve without roughness, for perfect
 	for i, df := range bounds {
 		us[i] = s.reach(all, df)
 	}
-	var out [2]point
+	var out [3]point
 	s.points(out[:0], us[:]...)
+	s.line = out[2].RSS
 	for i, df := range bounds {
 		if math.Abs(out[i].EDF-df) > loosely*df {
 			out[i] = s.bound(all, df)
 		}
 		out[i].end = []end{rough, smooth}[i]
 	}
-	return out
+	return [2]point{out[0], out[1]}
 }
 
 // reach places edf = df by the polynomial through the points about it.
@@ -460,6 +466,7 @@ func (s *search) automatic() (*Evidence, error) {
 
 // record lists the lattice as candidates, in order of edf.
 func (s *search) record(e *Evidence) {
+	slices.Reverse(s.lattice) // nearly in order then
 	slices.SortStableFunc(s.lattice, func(a, b point) int { return cmp.Compare(b.u, a.u) })
 	e.Candidates = make([]Candidate, 0, len(s.lattice))
 	for k, p := range s.lattice {
@@ -488,8 +495,11 @@ func (s *search) perfect() bool {
 	for i, y := range s.d.Y {
 		scale += float64(float64(s.d.W[i]*y) * y)
 	}
-	c := s.ws.Scores(s.d, math.Inf(1))
-	return c.RSS <= 1e-28*scale
+	if math.IsNaN(s.line) {
+		c := s.ws.Scores(s.d, math.Inf(1))
+		s.line = c.RSS
+	}
+	return s.line <= 1e-28*scale
 }
 
 func b2i(b bool) int {
