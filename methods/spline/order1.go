@@ -45,9 +45,10 @@ func (ws *memory1) filter(d *Data, q float64, wantDet bool) (det logProduct) {
 		f, den = f.step(x[i+1]-x[i], w[i], y[i], q)
 		fw[i+1] = f
 		if wantDet {
-			if p = float64(p * den); !(p < 1e100) {
-				det.times(p / den)
+			if !(den < 1e100) {
 				det.times(den)
+			} else if p = float64(p * den); p > 1e100 {
+				det.times(p)
 				p = 1
 			}
 		}
@@ -127,9 +128,25 @@ func (s *sums) knot(d *Data, i int, y, w, j, n float64) float64 {
 	for k := d.First[i]; k < d.First[i+1]; k++ {
 		wk := d.RowW[k]
 		ek := float64((d.RowY[k]-d.Y[i]+r)*tot) / (w - wk + j)
+		if wk > 0.5*w {
+			ek = d.leftOut(i, k, j, n)
+		}
 		s.loo += float64(float64(wk*ek) * ek)
 	}
 	return r
+}
+
+// leftOut returns the leave-one-out residual of row k at knot i, whose weight
+// is so much of the knot's that W - w would lose digits: from the other rows
+// there, and what all other readings know.
+func (d *Data) leftOut(i int, k int32, j, n float64) float64 {
+	for o := d.First[i]; o < d.First[i+1]; o++ {
+		if o != k {
+			j += d.RowW[o]
+			n += float64(d.RowW[o] * (d.RowY[o] - d.shift))
+		}
+	}
+	return d.RowY[k] - d.shift - n/j
 }
 
 func (s *sums) add(o *sums) {

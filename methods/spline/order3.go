@@ -72,7 +72,7 @@ func (s *state3) free(t float64) (b1, b2, c, a1, r float64) {
 	return s.b1 / u, s.b2 / u, s.c / float64(u*u), s.a1 / u, s.r + float64(t*s.k)
 }
 
-// bend is the map g' += t g”, then g” += noise of variance v.
+// bend is the map g' += t g^(2), then g^(2) += noise of variance v.
 func (s *state3) bend(t, v float64) {
 	tr := 1 + float64(t*s.r)
 	te := float64(t * s.e)
@@ -158,9 +158,10 @@ func (ws *memory3) filter(d *Data, q float64, wantDet bool) (det logProduct) {
 		k := m - 1 - i
 		bw[k].step(&bw[k-1], x[k]-x[k-1], w[k], y[k], q)
 		if wantDet {
-			if p = float64(p * den); !(p < 1e100) {
-				det.times(p / den)
+			if !(den < 1e100) {
 				det.times(den)
+			} else if p = float64(p * den); p > 1e100 {
+				det.times(p)
 				p = 1
 			}
 		}
@@ -177,7 +178,7 @@ func (ws *memory3) filter(d *Data, q float64, wantDet bool) (det logProduct) {
 //
 //	e0 = f.a1 + g.a1 + t0 g,  e1, e2 likewise,
 //
-// how far the two are apart in g' and, on either side's g', in g”, the cost of
+// how far the two are apart in g' and, on either side's g', in g^(2), the cost of
 // disagreeing is k0 e0^2 + k1 e1^2 + k2 e2^2.
 type meeting struct {
 	f, g       *state3
@@ -233,15 +234,15 @@ func (o *meeting) pulls(g float64) (p0, p1, p2 float64) {
 	return float64(o.k0 * (o.s0 + float64(o.t0*g))), float64(o.k1 * (o.s1 + float64(o.t1*g))), float64(o.k2 * (o.s2 + float64(o.t2*g)))
 }
 
-// higher returns g”' and g”” at the value g: they are q times the pull on
-// g” and on -g'.
+// higher returns g^(3) and g^(4) at the value g: they are q times the pull on
+// g^(2) and on -g'.
 func (o *meeting) higher(g, q float64) (third, fourth float64) {
 	p0, p1, p2 := o.pulls(g)
 	return float64((p2 - p1) * q), float64((p0 + float64(o.g.r*p1) + float64(o.f.r*p2)) * q)
 }
 
 // evaluate3 returns the criteria of order 3 at lambda (> 0, or +Inf for the
-// weighted parabola). Roughness is the integral of g”'^2; it and REML are
+// weighted parabola). Roughness is the integral of g^(3) squared; it and REML are
 // filled where reml is set.
 func evaluate3(ws *memory3, d *Data, lambda float64, reml bool) Criteria {
 	m := len(d.X)

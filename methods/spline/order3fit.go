@@ -44,7 +44,7 @@ func fit3(f *curve3, ws *memory3, d *Data, lambda float64) {
 	f.Third[0], f.Fourth[0], f.Third[m-1], f.Fourth[m-1] = 0, 0, 0, 0
 }
 
-// lower returns g' and g” at the value g, from the side that knows each
+// lower returns g' and g^(2) at the value g, from the side that knows each
 // better.
 func (o *meeting) lower(g float64, kf, kg knows) (slope, second float64) {
 	p0, p1, p2 := o.pulls(g)
@@ -75,7 +75,7 @@ func (o *meeting) lower(g float64, kf, kg knows) (slope, second float64) {
 	return slope, second
 }
 
-// at returns g, g', g” and g”' at x.
+// at returns g, g', g^(2) and g^(3) at x.
 func (f *curve3) at(x float64) (value, slope, second, third float64) {
 	m := len(f.Knots)
 	switch {
@@ -95,33 +95,44 @@ func (f *curve3) beyond(i int, x float64) (value, slope, second, third float64) 
 	return value, slope, second, 0
 }
 
-// piece evaluates the quintic between knots j and j+1: each derivative from
-// its own values at the knots and those two and four orders higher, with
-// u = x - x_j, v = x_(j+1) - x, p = u/h, o = v/h:
+// piece evaluates the quintic between knots j and j+1. With u = x - x_j,
+// v = x_(j+1) - x, p = u/h, o = v/h the value is Hermite's form
 //
-//	g = o g_j + p g_(j+1) - u v/6 [(1+o) g”_j + (1+p) g”_(j+1)]
-//	    + u v h^2/360 [(1+o)(7-3 o^2) g””_j + (1+p)(7-3 p^2) g””_(j+1)]
+//	o^3 [(1+3p+6p^2) g + (1+3p) u g' + u^2/2 g^(2)]_j
+//	+ p^3 [(1+3o+6o^2) g - (1+3o) v g' + v^2/2 g^(2)]_(j+1)
+//
+// and each derivative, which must not be a quotient of differences, Lidstone's,
+// from its own values at the knots and those two and four orders higher:
+//
+//	f = o f_j + p f_(j+1) - u v/6 [(1+o) f^(2)_j + (1+p) f^(2)_(j+1)]
+//	    + u v h^2/360 [(1+o)(7-3o^2) f^(4)_j + (1+p)(7-3p^2) f^(4)_(j+1)]
 //
 // Source: Lidstone (1929), Proc. Edinb. Math. Soc. (2) 2:16.
 func (f *curve3) piece(j int, x float64) (value, slope, second, third float64) {
 	x0, x1 := f.Knots[j], f.Knots[j+1]
 	h, u, v := x1-x0, x-x0, x1-x
 	p, o := u/h, v/h
+	hermite := func(i int, u, p, o float64) float64 {
+		p3 := float64(3 * p)
+		in := float64((1+p3+float64(float64(2*p)*p3))*f.Value[i]) + float64(u*(float64((1+p3)*f.Slope[i])+float64(float64(0.5*u)*f.Second[i])))
+		return float64(float64(float64(o*o)*o) * in)
+	}
+	value = hermite(j, u, p, o) + hermite(j+1, -v, o, p)
+
 	uv := float64(u * v)
 	w0, w1 := float64(uv*(1+o))/6, float64(uv*(1+p))/6
-	l0 := float64(float64(w0*float64(h*h))*(7-float64(3*float64(o*o)))) / 60
-	l1 := float64(float64(w1*float64(h*h))*(7-float64(3*float64(p*p)))) / 60
+	o2, p2 := float64(3*float64(o*o)), float64(3*float64(p*p))
+	fourth := float64(float64(h*h)*(float64(w0*(7-o2))+float64(w1*(7-p2)))) / 60
 	fifth := (f.Fourth[j+1] - f.Fourth[j]) / h
 	mix := func(a []float64) float64 { return float64(o*a[j]) + float64(p*a[j+1]) }
 	sag := func(a []float64) float64 { return float64(w0*a[j]) + float64(w1*a[j+1]) }
-	value = mix(f.Value) - sag(f.Second) + (float64(l0*f.Fourth[j]) + float64(l1*f.Fourth[j+1]))
-	slope = mix(f.Slope) - sag(f.Third) + float64((l0+l1)*fifth)
+	slope = mix(f.Slope) - sag(f.Third) + float64(fourth*fifth)
 	second = mix(f.Second) - sag(f.Fourth)
 	third = mix(f.Third) - float64(float64(0.5*uv)*fifth)
 	return value, slope, second, third
 }
 
-// moments3 are the posterior of g, g' and g” at one x: means, and variances
+// moments3 are the posterior of g, g' and g^(2) at one x: means, and variances
 // and covariances over sigma^2.
 type moments3 struct {
 	Value, Slope, Second           float64
@@ -130,7 +141,7 @@ type moments3 struct {
 	CovValueSecond, CovSlopeSecond float64
 }
 
-// posterior returns g, g' and g” at any x with their variances, from the
+// posterior returns g, g' and g^(2) at any x with their variances, from the
 // posterior of g as a twice integrated Wiener process with a diffuse start.
 // Source: Wahba (1978), JRSSB 40:364.
 func (f *curve3) posterior(x float64) moments3 {
@@ -195,7 +206,7 @@ func (out *moments3) alone(s *state3, v, sign float64) {
 }
 
 // both gives the variances where two filters meet: v is that of g. Given g,
-// the slope has mean ... + by1 g and variance c; given both, g” has mean
+// the slope has mean ... + by1 g and variance c; given both, g^(2) has mean
 // ... + r g' - k g and variance e.
 func (out *moments3) both(o *meeting, v float64, kf, kg knows) {
 	f, g := o.f, o.g

@@ -199,11 +199,11 @@ func (s *saddle) cov(x float64, k, l int) float64 {
 
 // truthM is what the saddle says of the whole fit.
 type truthM struct {
-	gap, lev               []float64 // y - g and S_ii by row
-	edf, rest              float64
-	rss, loo, rough        float64
-	reml                   float64
-	lambda, lambdaTimesPen float64
+	gap, lev        []float64 // y - g and S_ii by row
+	edf, rest       float64
+	rss, loo, rough float64
+	reml            float64
+	lambdaTimesPen  float64 // lambda * roughness
 }
 
 func (s *saddle) truth() truthM {
