@@ -64,7 +64,8 @@ func (ws *memory1) filter(d *Data, q float64, wantDet bool) (det logProduct) {
 }
 
 // evaluate1 returns the criteria of order 1 at lambda (> 0, or +Inf for the
-// weighted mean). Roughness is the integral of g'^2; it and REML are filled
+// weighted mean). d needs 2 distinct x and must serve this order alone, for it
+// keeps the constant of REML. Roughness is the integral of g'^2; it and REML are filled
 // where reml is set.
 func evaluate1(ws *memory1, d *Data, lambda float64, reml bool) Criteria {
 	m := len(d.X)

@@ -17,8 +17,8 @@ package spline
 //	g += h/5 g'    g' += h/2 g''    g'' += noise of variance 1/3 q h
 //	g += 3h/5 g'   g' += h/4 g''    g'' += noise of variance 1/9 q h
 //
-// give together the transition and the covariance of the process over h, which
-// seven equations of its entries and two of the transition's determine. That
+// give together the transition and the covariance of the process over h: the
+// three entries of the one and the six of the other determine the nine. That
 // such maps exist is the factorisation of totally positive elements of the
 // symplectic group (Lusztig 1994, Total positivity in reductive groups, Progr.
 // Math. 123:531); that such parameters keep relative accuracy is known from
@@ -242,8 +242,9 @@ func (o *meeting) higher(g, q float64) (third, fourth float64) {
 }
 
 // evaluate3 returns the criteria of order 3 at lambda (> 0, or +Inf for the
-// weighted parabola). Roughness is the integral of g^(3) squared; it and REML are
-// filled where reml is set.
+// weighted parabola). d needs 4 distinct x and must serve this order alone, for
+// it keeps the constant of REML. Roughness is the integral of g^(3) squared; it
+// and REML are filled where reml is set.
 func evaluate3(ws *memory3, d *Data, lambda float64, reml bool) Criteria {
 	m := len(d.X)
 	if m < 4 {
