@@ -41,7 +41,18 @@ func fit3(f *curve3, ws *memory3, d *Data, lambda float64) {
 		f.Slope[i], f.Second[i] = o.lower(g, kf, kg)
 		f.Third[i], f.Fourth[i] = o.higher(g, q)
 	}
-	f.Third[0], f.Fourth[0], f.Third[m-1], f.Fourth[m-1] = 0, 0, 0, 0
+	f.end(0, 1)
+	f.end(m-1, m-2)
+}
+
+// end fills the end knot i from its neighbour k, which is known from two sides:
+// the third derivative is a parabola between them with its vertex, 0, at i.
+func (f *curve3) end(i, k int) {
+	h := f.Knots[i] - f.Knots[k]
+	hg := float64(h * f.Third[k])
+	f.Second[i] = f.Second[k] + hg/3
+	f.Slope[i] = f.Slope[k] + float64(h*(f.Second[k]+0.25*hg))
+	f.Third[i], f.Fourth[i] = 0, 0
 }
 
 // lower returns g' and g^(2) at the value g, from the side that knows each
