@@ -20,6 +20,9 @@ func (f *Fit) Area(a, b float64) (value, variance float64) {
 	if a == b {
 		return 0, 0
 	}
+	if f.Order == 1 || f.Order == 3 {
+		return f.along(a, b, true)
+	}
 	x, m := f.Knots, len(f.Knots)
 	k := kernel{x: x, t: make([]float64, m), beta: make([]float64, m)}
 	k.before(a, min(b, x[0]))

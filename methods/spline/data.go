@@ -9,6 +9,7 @@ import (
 // Data is one group's rows with weight > 0 in canonical order, collapsed to
 // distinct x. Equal multisets of rows give equal Data, bit for bit.
 type Data struct {
+	Penalty    int // order of the penalty: 1, 2 or 3; 0 stands for 2. Set it before Reset
 	N          int // rows with weight > 0
 	ZeroWeight int // rows with weight 0: they take no part
 
@@ -53,8 +54,9 @@ func (e TooFewPointsError) Error() string {
 	return fmt.Sprintf("%d distinct x, a curve needs %d", e.Got, e.Need)
 }
 
-// MinDistinct is the fewest distinct x that a curve can be fitted to.
-const MinDistinct = 3
+// MinDistinct is the fewest distinct x that a curve of the given order can be
+// fitted to.
+func MinDistinct(order int) int { return order + 1 }
 
 // Collapse makes Data from rows; w nil means that every row weighs 1. The
 // slices are copied. Panics when lengths differ.
@@ -103,8 +105,8 @@ func (d *Data) Reset(x, y, w []float64) error {
 		sort.Stable((*rows)(d))
 	}
 	d.collapse()
-	if len(d.X) < MinDistinct {
-		return TooFewPointsError{MinDistinct, len(d.X)}
+	if need := MinDistinct(d.Null()); len(d.X) < need {
+		return TooFewPointsError{need, len(d.X)}
 	}
 	return nil
 }
@@ -175,6 +177,11 @@ func (d *Data) collapse() {
 	}
 }
 
-// Null is the number of parameters that the penalty leaves free: 2, those of a
-// straight line.
-func (d *Data) Null() int { return 2 }
+// Null is the number of parameters that the penalty leaves free, which is its
+// order: those of a constant, a straight line or a parabola.
+func (d *Data) Null() int {
+	if d.Penalty == 0 {
+		return 2
+	}
+	return d.Penalty
+}

@@ -11,6 +11,7 @@ import "math"
 type Path struct {
 	first first
 	steps []step
+	chain *chain  // orders 1 and 3
 	keep  []int32 // of the places on the way: the index asked for, or -1
 }
 
@@ -29,11 +30,6 @@ func (f *Fit) NewPath(xs []float64) *Path {
 	d, m := f.Data, len(f.Knots)
 	q := 1 / f.Lambda
 	// the places in order: knots, and what is asked for
-	type place struct {
-		x    float64
-		knot int // -1: none
-		keep int32
-	}
 	var all []place
 	i, k := 0, 0
 	for i < m || k < len(xs) {
@@ -61,6 +57,13 @@ func (f *Fit) NewPath(xs []float64) *Path {
 	}
 	all = all[lead:]
 	if len(all) == 0 {
+		return p
+	}
+	if f.Order == 1 || f.Order == 3 {
+		for _, pl := range all {
+			p.keep = append(p.keep, pl.keep)
+		}
+		p.chain = f.newChain(all)
 		return p
 	}
 	m0 := f.Posterior(all[0].x)
@@ -120,9 +123,18 @@ func newStep(h, q float64, back state, w float64, known bool) step {
 }
 
 // Draw makes one curve at the places: deviations from the posterior means of
-// value and slope, over sigma. normal returns standard normal deviates.
+// value and slope, over sigma; of order 1, which has no slope, of the value
+// alone. normal returns standard normal deviates.
 func (p *Path) Draw(normal func() float64, value, slope []float64) {
 	if len(p.keep) == 0 {
+		return
+	}
+	if p.chain != nil {
+		p.chain.draw(normal, func(j int, s [3]float64) {
+			if k := p.keep[j]; k >= 0 {
+				value[k], slope[k] = s[0], s[1]
+			}
+		})
 		return
 	}
 	g := float64(p.first.sdValue * normal())
@@ -150,6 +162,9 @@ func (f *Fit) Change(a, b float64) (value, variance float64) {
 	if b < a {
 		value, variance = f.Change(b, a)
 		return -value, variance
+	}
+	if f.Order == 1 || f.Order == 3 {
+		return f.along(a, b, false)
 	}
 	va, _, _ := f.At(a)
 	vb, _, _ := f.At(b)

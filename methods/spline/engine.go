@@ -74,7 +74,9 @@ const (
 // used and must not be shared between goroutines.
 type Workspace struct {
 	forward, backward []state
-	lanes             lanes // of Scores4 and Criteria4
+	lanes             lanes   // of Scores4 and Criteria4
+	one               memory1 // order 1
+	three             memory3 // order 3
 }
 
 // Criteria is what one lambda gives: the scores a rule may minimise.
@@ -211,8 +213,14 @@ func (ws *Workspace) filter(d *Data, q float64, wantDet bool) (det logProduct) {
 
 // evaluate runs the filters and combines them at every knot.
 func (ws *Workspace) evaluate(d *Data, lambda float64, reml bool) Criteria {
+	switch d.Null() {
+	case 1:
+		return evaluate1(&ws.one, d, lambda, reml)
+	case 3:
+		return evaluate3(&ws.three, d, lambda, reml)
+	}
 	m := len(d.X)
-	if m < MinDistinct {
+	if m < MinDistinct(2) {
 		panic("spline: fewer than 3 distinct x")
 	}
 	q := 1 / lambda

@@ -1,25 +1,46 @@
 package spline
 
 import (
+	"math"
 	"sort"
 )
 
-// Curve is a natural cubic spline: its values and second derivatives at the
-// knots. Between knots it is the cubic they give, beyond them straight. It is
-// all that is needed to evaluate the curve elsewhere:
+// Curve is a natural spline of degree 2 Order - 1, by what is needed to
+// evaluate it anywhere.
+//
+// Order 1: straight between the values at the knots, constant beyond them.
+//
+// Order 2: between knots the cubic that values and second derivatives give,
+// beyond them straight:
 //
 //	g(t) = (v g_j + u g_(j+1))/h - u v/6 [(1 + v/h) c_j + (1 + u/h) c_(j+1)]
 //
 // for t between knots j and j+1, u = t - x_j, v = x_(j+1) - t, h = u + v.
+//
+// Order 3: between knots the quintic that values, slopes and second derivatives
+// at its ends give, beyond them the parabola of the end.
 type Curve struct {
+	Order     int       // of the penalty; 0 stands for 2
 	Knots     []float64 // increasing
 	Value     []float64 // g at the knots, in the unit of y
-	Curvature []float64 // g'' at the knots, 0 at both ends
+	Curvature []float64 // g'' at the knots: orders 2 (0 at both ends) and 3
+	Slope     []float64 // g' at the knots: order 3
+
+	Third, Fourth []float64 // third and fourth derivatives at the knots: order 3
 }
 
 // At returns value, slope and second derivative at x.
 func (c *Curve) At(x float64) (value, slope, curvature float64) {
 	m := len(c.Knots)
+	switch {
+	case c.Order == 3:
+		value, slope, curvature, _ = c.at3(x)
+		return value, slope, curvature
+	case c.Order == 1 && x <= c.Knots[0]:
+		return c.Value[0], 0, 0
+	case c.Order == 1 && x >= c.Knots[m-1]:
+		return c.Value[m-1], 0, 0
+	}
 	if x <= c.Knots[0] {
 		_, slope, _ = c.Piece(0, c.Knots[0])
 		return c.Value[0] + float64(slope*(x-c.Knots[0])), slope, 0
@@ -40,9 +61,17 @@ func (c *Curve) Interval(x float64) int {
 	return max(0, min(j, len(c.Knots)-2))
 }
 
-// Piece evaluates the cubic between knots j and j+1, also outside them.
+// Piece evaluates the polynomial between knots j and j+1, also outside them.
 func (c *Curve) Piece(j int, x float64) (value, slope, curvature float64) {
 	x0, x1 := c.Knots[j], c.Knots[j+1]
+	switch c.Order {
+	case 1:
+		p, o := (x-x0)/(x1-x0), (x1-x)/(x1-x0)
+		return float64(o*c.Value[j]) + float64(p*c.Value[j+1]), (c.Value[j+1] - c.Value[j]) / (x1 - x0), 0
+	case 3:
+		value, slope, curvature, _ = c.piece3(j, x)
+		return value, slope, curvature
+	}
 	g0, g1, c0, c1 := c.Value[j], c.Value[j+1], c.Curvature[j], c.Curvature[j+1]
 	h, u, v := x1-x0, x-x0, x1-x
 	p, o := u/h, v/h
@@ -63,10 +92,12 @@ type Fit struct {
 	info     []float64 // precision of g at the knot from all other readings
 	forward  []state
 	backward []state
+	one      *curve1 // order 1
+	three    *curve3 // order 3
 }
 
 // Fit computes everything at lambda (> 0, or +Inf for the weighted straight
-// line).
+// line; of other orders the constant, the parabola).
 func (ws *Workspace) Fit(d *Data, lambda float64) *Fit {
 	f := &Fit{}
 	ws.FitInto(f, d, lambda)
@@ -75,6 +106,28 @@ func (ws *Workspace) Fit(d *Data, lambda float64) *Fit {
 
 // FitInto is Fit into the memory of f.
 func (ws *Workspace) FitInto(f *Fit, d *Data, lambda float64) {
+	switch d.Null() {
+	case 1:
+		if f.one == nil {
+			f.one = &curve1{}
+		}
+		fit1(f.one, &ws.one, d, lambda)
+		f.Criteria, f.Data = f.one.Criteria, d
+		f.Curve = Curve{Order: 1, Knots: f.one.Knots, Value: f.one.Value}
+		f.Leverage, f.Gap, f.info = f.one.Leverage, f.one.Gap, f.one.info
+		return
+	case 3:
+		if f.three == nil {
+			f.three = &curve3{}
+		}
+		fit3(f.three, &ws.three, d, lambda)
+		f.Criteria, f.Data, f.Curve = f.three.Criteria, d, f.three.Curve
+		f.Leverage, f.Gap, f.info = f.three.Leverage, f.three.Gap, f.three.info
+		return
+	}
+	if f.Order == 1 || f.Order == 3 { // the memory of another order's fit
+		*f = Fit{}
+	}
 	m := len(d.X)
 	f.Criteria = ws.evaluate(d, lambda, true)
 	f.Data = d
@@ -131,7 +184,14 @@ func (f *Fit) RowLeftOut(k int) float64 {
 // Moments are the posterior of value and slope at one x: means in the unit of
 // y (and y over x), variances over sigma^2. SlopeGiven is the variance of the
 // slope where the value is known.
-type Moments struct{ Value, Slope, VarValue, VarSlope, Cov, SlopeGiven float64 }
+//
+// Curvature and its variance belong to order 3: of order 2 the posterior has no
+// second derivative, of order 1 no slope, and their variances are infinite.
+type Moments struct {
+	Value, Slope, Curvature          float64
+	VarValue, VarSlope, VarCurvature float64
+	Cov, SlopeGiven                  float64
+}
 
 // Posterior returns value and slope at any x with their variances, from the
 // posterior of g as an integrated Wiener process with a diffuse start: at a
@@ -140,7 +200,19 @@ type Moments struct{ Value, Slope, VarValue, VarSlope, Cov, SlopeGiven float64 }
 // Source: Wahba (1978), JRSSB 40:364; Wahba (1983), JRSSB 45:133.
 func (f *Fit) Posterior(x float64) Moments {
 	var out Moments
-	out.Value, out.Slope, _ = f.At(x)
+	switch f.Order {
+	case 1:
+		out.Value, out.Slope, _ = f.At(x)
+		_, out.VarValue = f.one.posterior(x)
+		out.VarSlope, out.VarCurvature, out.SlopeGiven = math.Inf(1), math.Inf(1), math.Inf(1)
+		return out
+	case 3:
+		m := f.three.posterior(x)
+		return Moments{m.Value, m.Slope, m.Second, m.VarValue, m.VarSlope, m.VarSecond, m.Cov,
+			max(0, m.VarSlope-float64(m.Cov*m.Cov)/m.VarValue)}
+	}
+	out.Value, out.Slope, out.Curvature = f.At(x)
+	out.VarCurvature = math.Inf(1)
 	d, m := f.Data, len(f.Knots)
 	q := 1 / f.Lambda
 	one := func(s state) { // one filter alone knows of x

@@ -17,7 +17,7 @@ func (ws *Workspace) Criteria4(d *Data, lambda [4]float64, out *[4]Criteria) {
 var useLanes = true
 
 func (ws *Workspace) evaluate4(d *Data, lambda *[4]float64, out *[4]Criteria, reml bool) {
-	if useLanes && ws.evaluateLanes(d, lambda, out, reml) {
+	if useLanes && d.Null() == 2 && ws.evaluateLanes(d, lambda, out, reml) {
 		return
 	}
 	for k, l := range lambda {

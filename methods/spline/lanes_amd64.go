@@ -76,7 +76,7 @@ func (ws *Workspace) evaluateLanes(d *Data, lambda *[4]float64, out *[4]Criteria
 	if !cpu.X86.HasAVX2 || m > mostKnots {
 		return false
 	}
-	if m < MinDistinct {
+	if m < MinDistinct(2) {
 		panic("spline: fewer than 3 distinct x")
 	}
 	s := &ws.lanes

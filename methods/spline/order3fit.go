@@ -3,27 +3,24 @@ package spline
 // curve3 is a fitted curve of order 3. It refers to the Data it was made from.
 type curve3 struct {
 	Criteria
-	Data  *Data
-	Knots []float64
-	// g and its derivatives at the knots, all continuous there; the fifth is
-	// constant between knots.
-	Value, Slope, Second, Third, Fourth []float64
-	Leverage                            []float64 // S_jj of each knot
-	Gap                                 []float64 // mean response less g at each knot, free of cancellation
-	info                                []float64 // precision of g at the knot from all other readings
-	forward                             []state3
-	backward                            []state3
+	Curve
+	Data     *Data
+	Leverage []float64 // S_jj of each knot
+	Gap      []float64 // mean response less g at each knot, free of cancellation
+	info     []float64 // precision of g at the knot from all other readings
+	forward  []state3
+	backward []state3
 }
 
 // fit3 computes everything at lambda into the memory of f.
 func fit3(f *curve3, ws *memory3, d *Data, lambda float64) {
 	m := len(d.X)
 	f.Criteria = evaluate3(ws, d, lambda, true)
-	f.Data = d
+	f.Data, f.Order = d, 3
 	f.Knots = append(f.Knots[:0], d.X...)
 	f.forward = append(f.forward[:0], ws.forward[:m]...)
 	f.backward = append(f.backward[:0], ws.backward[:m]...)
-	f.Value, f.Slope, f.Second = grow(f.Value, m), grow(f.Slope, m), grow(f.Second, m)
+	f.Value, f.Slope, f.Curvature = grow(f.Value, m), grow(f.Slope, m), grow(f.Curvature, m)
 	f.Third, f.Fourth = grow(f.Third, m), grow(f.Fourth, m)
 	f.Leverage, f.Gap, f.info = grow(f.Leverage, m), grow(f.Gap, m), grow(f.info, m)
 	q := 1 / lambda
@@ -38,7 +35,7 @@ func fit3(f *curve3, ws *memory3, d *Data, lambda float64) {
 		f.info[i] = o.j
 		f.Leverage[i] = w[i] / (w[i] + o.j)
 		f.Value[i] = g + d.shift
-		f.Slope[i], f.Second[i] = o.lower(g, kf, kg)
+		f.Slope[i], f.Curvature[i] = o.lower(g, kf, kg)
 		f.Third[i], f.Fourth[i] = o.higher(g, q)
 	}
 	f.end(0, 1)
@@ -50,8 +47,8 @@ func fit3(f *curve3, ws *memory3, d *Data, lambda float64) {
 func (f *curve3) end(i, k int) {
 	h := f.Knots[i] - f.Knots[k]
 	hg := float64(h * f.Third[k])
-	f.Second[i] = f.Second[k] + hg/3
-	f.Slope[i] = f.Slope[k] + float64(h*(f.Second[k]+0.25*hg))
+	f.Curvature[i] = f.Curvature[k] + hg/3
+	f.Slope[i] = f.Slope[k] + float64(h*(f.Curvature[k]+0.25*hg))
 	f.Third[i], f.Fourth[i] = 0, 0
 }
 
@@ -86,27 +83,27 @@ func (o *meeting) lower(g float64, kf, kg knows) (slope, second float64) {
 	return slope, second
 }
 
-// at returns g, g', g^(2) and g^(3) at x.
-func (f *curve3) at(x float64) (value, slope, second, third float64) {
+// at3 returns g, g', g^(2) and g^(3) of a curve of order 3 at x.
+func (f *Curve) at3(x float64) (value, slope, second, third float64) {
 	m := len(f.Knots)
 	switch {
 	case x <= f.Knots[0]:
-		return f.beyond(0, x)
+		return f.beyond3(0, x)
 	case x >= f.Knots[m-1]:
-		return f.beyond(m-1, x)
+		return f.beyond3(m-1, x)
 	}
-	return f.piece(interval(f.Knots, x), x)
+	return f.piece3(interval(f.Knots, x), x)
 }
 
-func (f *curve3) beyond(i int, x float64) (value, slope, second, third float64) {
+func (f *Curve) beyond3(i int, x float64) (value, slope, second, third float64) {
 	u := x - f.Knots[i]
-	second = f.Second[i]
+	second = f.Curvature[i]
 	slope = f.Slope[i] + float64(u*second)
 	value = f.Value[i] + float64(u*(f.Slope[i]+float64(float64(0.5*u)*second)))
 	return value, slope, second, 0
 }
 
-// piece evaluates the quintic between knots j and j+1. With u = x - x_j,
+// piece3 evaluates the quintic between knots j and j+1. With u = x - x_j,
 // v = x_(j+1) - x, p = u/h, o = v/h the value is Hermite's form
 //
 //	o^3 [(1+3p+6p^2) g + (1+3p) u g' + u^2/2 g^(2)]_j
@@ -119,13 +116,13 @@ func (f *curve3) beyond(i int, x float64) (value, slope, second, third float64) 
 //	    + u v h^2/360 [(1+o)(7-3o^2) f^(4)_j + (1+p)(7-3p^2) f^(4)_(j+1)]
 //
 // Source: Lidstone (1929), Proc. Edinb. Math. Soc. (2) 2:16.
-func (f *curve3) piece(j int, x float64) (value, slope, second, third float64) {
+func (f *Curve) piece3(j int, x float64) (value, slope, second, third float64) {
 	x0, x1 := f.Knots[j], f.Knots[j+1]
 	h, u, v := x1-x0, x-x0, x1-x
 	p, o := u/h, v/h
 	hermite := func(i int, u, p, o float64) float64 {
 		p3 := float64(3 * p)
-		in := float64((1+p3+float64(float64(2*p)*p3))*f.Value[i]) + float64(u*(float64((1+p3)*f.Slope[i])+float64(float64(0.5*u)*f.Second[i])))
+		in := float64((1+p3+float64(float64(2*p)*p3))*f.Value[i]) + float64(u*(float64((1+p3)*f.Slope[i])+float64(float64(0.5*u)*f.Curvature[i])))
 		return float64(float64(float64(o*o)*o) * in)
 	}
 	value = hermite(j, u, p, o) + hermite(j+1, -v, o, p)
@@ -138,7 +135,7 @@ func (f *curve3) piece(j int, x float64) (value, slope, second, third float64) {
 	mix := func(a []float64) float64 { return float64(o*a[j]) + float64(p*a[j+1]) }
 	sag := func(a []float64) float64 { return float64(w0*a[j]) + float64(w1*a[j+1]) }
 	slope = mix(f.Slope) - sag(f.Third) + float64(fourth*fifth)
-	second = mix(f.Second) - sag(f.Fourth)
+	second = mix(f.Curvature) - sag(f.Fourth)
 	third = mix(f.Third) - float64(float64(0.5*uv)*fifth)
 	return value, slope, second, third
 }
@@ -157,7 +154,7 @@ type moments3 struct {
 // Source: Wahba (1978), JRSSB 40:364.
 func (f *curve3) posterior(x float64) moments3 {
 	var out moments3
-	out.Value, out.Slope, out.Second, _ = f.at(x)
+	out.Value, out.Slope, out.Second, _ = f.at3(x)
 	d, m := f.Data, len(f.Knots)
 	q := 1 / f.Lambda
 	var s, b state3
