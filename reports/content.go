@@ -69,14 +69,16 @@ func build(d *Document) []node {
 	out = append(out, summary(d)...)
 	rules := map[string]bool{}
 	pointwise := len(d.Curves) == 0
+	orders := map[int]bool{}
 	for i := range d.Curves {
+		orders[d.Curves[i].Order] = true
 		pointwise = pointwise || d.Curves[i].BandKind != "simultaneous"
 		out = append(out, curveSection(&d.Curves[i], i, rules)...)
 	}
 	for i := range d.Contrasts {
 		out = append(out, contrastSection(&d.Contrasts[i], i)...)
 	}
-	out = append(out, howToRead(rules, pointwise, len(d.Contrasts) > 0)...)
+	out = append(out, howToRead(rules, orders, pointwise, len(d.Contrasts) > 0)...)
 	return append(out, record(&d.Record)...)
 }
 
@@ -237,6 +239,9 @@ func definition(c *Curve) string {
 	}
 	if c.Weight != "" {
 		s += fmt.Sprintf(", rows weighted by %s", c.Weight)
+	}
+	if c.Order == 1 || c.Order == 3 {
+		s += fmt.Sprintf(", with a penalty of order %d", c.Order)
 	}
 	return s + fmt.Sprintf(". Smoothness by the rule %s. The band holds %s %s with %s%%.", c.Rule, c.BandFor, held(c.BandKind), percent(c.Level))
 }

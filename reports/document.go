@@ -56,6 +56,7 @@ type Curve struct {
 	Level      float64  // of the band
 	BandFor    string   // "the curve" or "a new reading"
 	BandKind   string   // pointwise, simultaneous
+	Order      int      // of the penalty; 0 stands for 2
 	Rows       RowCount // how the input's rows became this curve's rows
 	Exceptions []Exception
 	Guards     []Guard

@@ -14,14 +14,12 @@ var ruleWords = []struct{ rule, text string }{
 }
 
 // howToRead explains the terms of the report, and cautions.
-func howToRead(rules map[string]bool, pointwise, contrasts bool) []node {
-	items := []string{
-		"A curve is a penalised smooth: of all curves it has the least weighted squared distance to the rows plus lambda times its total squared bend. Between the data it is a cubic, beyond them a straight line.",
-		"edf, the effective degrees of freedom, counts how many free numbers the curve spends: 2 is a straight line, more is wigglier. It can be compared between groups; lambda cannot.",
+func howToRead(rules map[string]bool, orders map[int]bool, pointwise, contrasts bool) []node {
+	items := append(orderWords(orders),
 		"sigma is the residual standard deviation of a row of weight 1, sqrt(RSS / (n − edf)).",
 		bandWords(pointwise),
 		"A crossing or a peak has the interval over which the band still allows it. “Open” means that the data end before the interval does.",
-	}
+	)
 	for _, r := range ruleWords {
 		if rules[r.rule] {
 			items = append(items, "The rule "+r.text)
@@ -44,4 +42,22 @@ func bandWords(pointwise bool) string {
 		return "The band is pointwise: at any one x it holds the curve with the stated level, averaged along the curve. It does not hold the whole curve at once."
 	}
 	return "A simultaneous band holds the whole curve over its grid at once, with the stated level. Readings have their own, pointwise, intervals."
+}
+
+// orderWords says what a curve and its edf are, for each order of penalty.
+func orderWords(orders map[int]bool) []string {
+	const smooth = "A curve is a penalised smooth: of all curves it has the least weighted squared distance to the rows plus lambda times its total squared "
+	const edf = "edf, the effective degrees of freedom, counts how many free numbers the curve spends: "
+	const compare = ", more is wigglier. It can be compared between groups; lambda cannot."
+	var out []string
+	if orders[2] || len(orders) == 0 || !orders[1] && !orders[3] {
+		out = append(out, smooth+"bend. Between the data it is a cubic, beyond them a straight line.", edf+"2 is a straight line"+compare)
+	}
+	if orders[1] {
+		out = append(out, "Order 1: "+smooth+"slope. Between the data it is straight, beyond them constant.", edf+"1 is a constant"+compare)
+	}
+	if orders[3] {
+		out = append(out, "Order 3: "+smooth+"third derivative. Between the data it is a quintic, beyond them a parabola.", edf+"3 is a parabola"+compare)
+	}
+	return out
 }

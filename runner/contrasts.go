@@ -113,8 +113,9 @@ func (cf *curveFits) difference(s *spec.Study, c *spec.Contrast, p pair) (out re
 			inside = append(inside, x)
 		}
 	}
-	band := reading.Band{Level: cf.def.Band.Level, Simultaneous: cf.def.Band.Simultaneous}
-	return reading.Difference(fa, fb, band, inside, s.Seed, fitName(c.Name.Text, p.label)), nil
+	band := reading.Band{Level: cf.def.Band.Level, Simultaneous: cf.def.Band.Simultaneous,
+		Seed: s.Seed, Group: fitName(c.Name.Text, p.label)}
+	return reading.Difference(fa, fb, band, inside), nil
 }
 
 // tested is a contrast's pair with its tests, adjusted for the number of pairs.

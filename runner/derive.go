@@ -42,7 +42,7 @@ func (ft *fitter) derive(cf *curveFits, i int, want wants) (*derived, error) {
 		if err != nil {
 			return nil, err
 		}
-		b, err := band(c, fit)
+		b, err := band(cf, i, fit)
 		if err != nil {
 			return nil, err
 		}
@@ -52,7 +52,7 @@ func (ft *fitter) derive(cf *curveFits, i int, want wants) (*derived, error) {
 		for i := range c.Readings {
 			r := &c.Readings[i]
 			a := reading.Ask{Kind: r.Kind, At: r.At, Direction: r.Direction, All: r.All, From: r.From, To: r.To}
-			if r.Kind == spec.Surely || r.Kind == spec.Steepest {
+			if r.Kind == spec.Surely || r.Kind == spec.Steepest || c.Order == 1 && (r.Kind == spec.Maximum || r.Kind == spec.Minimum) {
 				if a.Grid, err = gridOf(&c.Grid, lo, hi); err != nil {
 					return nil, err
 				}
@@ -108,7 +108,7 @@ func gridBeyond(g *spec.Grid, lo, hi float64) bool {
 // beyond tells whether a reading asks for a place outside the observed range.
 func beyond(r *spec.Reading, lo, hi float64) bool {
 	switch r.Kind {
-	case spec.ValueAt, spec.SlopeAt:
+	case spec.ValueAt, spec.SlopeAt, spec.BendAt:
 		return r.At < lo || r.At > hi
 	case spec.Area, spec.Mean, spec.Change:
 		return r.From < lo || r.To > hi
@@ -118,8 +118,9 @@ func beyond(r *spec.Reading, lo, hi float64) bool {
 
 // band is the interval that stands about a fit's curve. A simultaneous one
 // holds over the stretch of the fit's grid.
-func band(c *spec.Curve, fit *spline.Fit) (reading.Band, error) {
-	b := reading.Band{Level: c.Band.Level, Simultaneous: c.Band.Simultaneous, NewReading: c.Band.NewReading, Weight: c.Band.Weight}
+func band(cf *curveFits, i int, fit *spline.Fit) (reading.Band, error) {
+	c := cf.def
+	b := reading.Band{Seed: cf.seed, Group: fitName(c.Name.Text, label(cf.by, cf.fits[i].Group)), Level: c.Band.Level, Simultaneous: c.Band.Simultaneous, NewReading: c.Band.NewReading, Weight: c.Band.Weight}
 	if b.Simultaneous {
 		xs, err := gridOf(&c.Grid, fit.Knots[0], fit.Knots[len(fit.Knots)-1])
 		if err != nil {
@@ -145,6 +146,8 @@ func unitOf(c *spec.Curve, kind string) string {
 		return x
 	case kind == spec.SlopeAt || kind == spec.Steepest:
 		return compound(y, "/", x)
+	case kind == spec.BendAt:
+		return compound(compound(y, "/", x), "/", x)
 	case kind == spec.Area:
 		return compound(y, " ", x)
 	}

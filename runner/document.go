@@ -114,7 +114,7 @@ func (r *Run) curveDocument(ctx context.Context, c *spec.Curve, brief bool) (*re
 	cf := r.curves[c.Name.Text]
 	out := &reports.Curve{
 		Name: c.Name.Text, X: axis(&c.Along), Y: axis(&c.Response), By: cf.by, Rule: ruleText(&c.Rule),
-		Level: c.Band.Level, BandFor: "the curve", BandKind: bandKind(&c.Band),
+		Level: c.Band.Level, BandFor: "the curve", BandKind: bandKind(&c.Band), Order: c.Order,
 		Rows: reports.RowCount{Read: cf.count.Read, ZeroWeight: cf.zero},
 	}
 	if c.Band.NewReading {

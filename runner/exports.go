@@ -109,6 +109,12 @@ func (x *exporter) columns() []string {
 	case spec.ExportResiduals:
 		return []string{"row", c.Along.Name.Text, c.Response.Name.Text, "weight", "fitted", "residual", "leverage", "left_out", "file"}
 	}
+	switch c.Order {
+	case 1:
+		return []string{"knot", "value"}
+	case 3:
+		return []string{"knot", "value", "slope", "curvature"}
+	}
 	return []string{"knot", "value", "curvature"}
 }
 
@@ -191,7 +197,12 @@ func (x *exporter) fit(ft *fitter, w *table.Writer, k int) error {
 			x.begin(w, k)
 			w.Place(f.Knots[j], date)
 			w.Number(f.Value[j])
-			w.Number(f.Curvature[j])
+			if c.Order == 3 {
+				w.Number(f.Slope[j])
+			}
+			if c.Order > 1 {
+				w.Number(f.Curvature[j])
+			}
 			w.End()
 		}
 		return nil

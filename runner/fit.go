@@ -29,6 +29,7 @@ type storedFit struct {
 	Rule      string   `cbor:"r"`
 	Exception string   `cbor:"e,omitempty"`
 
+	Order       int     `cbor:"od,omitempty"` // of the penalty, where it is not 2
 	Shared      string  `cbor:"sh,omitempty"` // what the groups have in common: lambda or edf
 	SharedValue float64 `cbor:"sv,omitempty"` // log lambda, or edf
 	SharedBy    int     `cbor:"sn,omitempty"` // by how many groups
@@ -43,6 +44,7 @@ type storedFit struct {
 
 	Knots     floats `cbor:"kx,omitempty"`
 	Value     floats `cbor:"kv,omitempty"`
+	Slope     floats `cbor:"ks,omitempty"` // order 3
 	Curvature floats `cbor:"kc,omitempty"`
 
 	Failed string `cbor:"no,omitempty"` // why there is no fit
@@ -111,6 +113,7 @@ func (ft *fitter) compute(s *spec.Study, r *spec.Rule, out *storedFit, group str
 	out.Knots = append(floats(nil), f.Knots...)
 	out.Value = append(floats(nil), f.Value...)
 	out.Curvature = append(floats(nil), f.Curvature...)
+	out.Slope = append(floats(nil), f.Slope...)
 	if bad := notFinite(out); bad != "" {
 		out.Failed = fmt.Sprintf("the fit's %s is not a finite number: the data's scale is beyond what can be fitted; rescale x, y or the weights", bad)
 	}
@@ -158,6 +161,7 @@ func (ft *fitter) open(f *storedFit) (*spline.Fit, error) {
 	if len(f.W) > 0 {
 		w = f.W
 	}
+	ft.data.Penalty = f.Order
 	if err := ft.data.Reset(f.X, f.Y, w); err != nil {
 		return nil, err
 	}

@@ -116,6 +116,7 @@ func curveKey(s *spec.Study, c *spec.Curve, files map[string][]table.File) *key 
 	k := newKey("curve", objectVersion)
 	methodLines(k)
 	k.add("parts", partCount)
+	k.add("order", c.Order)
 	k.add("response", c.Response.Name.Text)
 	k.add("along", c.Along.Name.Text)
 	for _, b := range c.By {
@@ -158,6 +159,7 @@ func groupKey(s *spec.Study, r *spec.Rule, exception, group string, d *spline.Da
 	if r.Name == spec.KFold {
 		k.add("group", group)
 	}
+	k.add("order", d.Null())
 	k.add("shared", shared)
 	k.add("rows", d.N, d.ZeroWeight)
 	h := sha256.New()

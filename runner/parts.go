@@ -194,6 +194,7 @@ func (r *curveRun) load(ft *fitter, c *spec.Curve, w *weighing, j *job, i int, r
 		block = w.block[rule.Block.Name.Text]
 	}
 	ft.gather(w.x, w.y, w.w, block, j.groups[i].rows)
+	ft.data.Penalty = c.Order
 	err = ft.data.Reset(ft.x, ft.y, ft.weights())
 	if block != nil {
 		rerank(ft.block)
@@ -205,6 +206,9 @@ func (r *curveRun) load(ft *fitter, c *spec.Curve, w *weighing, j *job, i int, r
 // describe settles a group's rule and key.
 func (r *curveRun) describe(ft *fitter, c *spec.Curve, w *weighing, j *job, i int, shared map[*spec.Rule]sharedChoice) (*storedFit, *spec.Rule, error) {
 	out := &storedFit{Group: j.text[i]}
+	if c.Order != 2 {
+		out.Order = c.Order
+	}
 	_, err := r.load(ft, c, w, j, i, nil)
 	why := ""
 	if err != nil {

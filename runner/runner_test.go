@@ -159,7 +159,7 @@ func TestSameBytes(t *testing.T) {
 	rows := rowsOf(5, 30)
 	for _, rule := range []string{"gcv", "reml", "aicc", "kfold\n    folds = 5", "kfold\n    block = lot",
 		"kfold\n    folds = 6\n    stretches = true\n    gap = 0.5", "loocv\n    one_se = true", "known_sigma\n    sigma = 0.4",
-		"residual_target\n    sigma = 0.5", "gcv\n    shared = true", "reml\n    shared = edf"} {
+		"residual_target\n    sigma = 0.5", "gcv\n  }\n  order = 1\n  band {\n    kind = simultaneous", "reml\n  }\n  order = 3\n  reading \"bend\" { curvature_at = 2 }\n  band {\n    level = 0.9", "gcv\n    shared = true", "reml\n    shared = edf"} {
 		dir := write(t, rule, map[string][]string{"d.csv": rows})
 		execute(t, dir, 1)
 		want := outputs(t, dir)

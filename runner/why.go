@@ -268,7 +268,7 @@ func (r *Recorded) Read(curve string, match []Match, xs []float64) ([]Values, *s
 		if err != nil {
 			return nil, nil, err
 		}
-		b, err := band(cf.def, fit)
+		b, err := band(cf, i, fit)
 		if err != nil {
 			return nil, nil, err
 		}

@@ -45,7 +45,7 @@ func whyText(f *storedFit) string {
 	case chosen < 0:
 		s += fmt.Sprintf("the smoothest candidate within one standard error of the best was taken, at %s.", edf)
 	case f.Minima[chosen].End == "smooth":
-		s += fmt.Sprintf("its smallest value lies at the smooth end of the search, %s: the data ask for no more than a straight line, or nearly so.", edf)
+		s += fmt.Sprintf("its smallest value lies at the smooth end of the search, %s: the data ask for no more than %s, or nearly so.", edf, nullSpace(f))
 	case f.Minima[chosen].End == "rough":
 		s += fmt.Sprintf("its smallest value lies at the rough end of the search, %s, and it would fall further beyond.", edf)
 	default:
@@ -88,8 +88,12 @@ func flagText(name string, v verdict) string {
 		return "The criterion is smallest at an end of the searched range, so the bound and not the data set the smoothness. Look at the curve; widen or narrow df_at_least and df_at_most on purpose, or use another rule."
 	case choose.TargetUnreached:
 		return "No curve in the searched range comes as near the rows as the stated sigma says. Sigma may be too small, or tied rows alone spread further; check it before relying on the curve."
-	case "straight_line":
+	case choose.StraightLine:
 		return "The rule chose a straight line, or nearly so: the scatter hides any bend. That is a result; more readings or less scatter would be needed to see a bend."
+	case choose.Constant:
+		return "The rule chose a constant, or nearly so: the scatter hides any change. That is a result; more readings or less scatter would be needed to see one."
+	case choose.Parabola:
+		return "The rule chose a parabola, or nearly so: the scatter hides anything else. That is a result; more readings or less scatter would be needed to see it."
 	case "several_minima":
 		return "Two or more minima score within 1% of each other: the data do not settle between a smoother and a wigglier curve. Compare them before relying on detail; df_at_most or reml would settle it by rule."
 	case "autocorrelated":
@@ -99,7 +103,7 @@ func flagText(name string, v verdict) string {
 	case "few_distinct":
 		return "There are few distinct x, so little can be said about smoothness from the data alone. Consider fixed_df with a reason."
 	case "extrapolated":
-		return "A reading or the grid lies beyond the data. The curve goes on straight there by assumption, and the band widens; nothing observed supports it."
+		return "A reading or the grid lies beyond the data. The curve goes on there by assumption (constant, straight or as a parabola, by its order), and the band widens; nothing observed supports it."
 	}
 	if g, ok := strings.CutPrefix(name, "guard "); ok {
 		return fmt.Sprintf("The guard %q warns: its condition does not hold for this fit.", g)
@@ -113,4 +117,15 @@ func capital(s string) string {
 		return s
 	}
 	return strings.ToUpper(s[:1]) + s[1:]
+}
+
+// nullSpace names the curves that the fit's penalty leaves free.
+func nullSpace(f *storedFit) string {
+	switch f.Order {
+	case 1:
+		return "a constant"
+	case 3:
+		return "a parabola"
+	}
+	return "a straight line"
 }

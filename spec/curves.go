@@ -59,6 +59,10 @@ func (r *reader) curve(b *block, name Name, kinds map[string]string) {
 	if c.Response.Name.Text != "" && c.Response.Name.Text == c.Along.Name.Text {
 		r.fail(c.Along.Name.Range, fmt.Sprintf("%q along itself", c.Along.Name.Text), "expected another column for the x axis")
 	}
+	c.Order = 2
+	if v, ok := b.whole("order", false, 1, 3, "an order of 1, 2 or 3: the penalty's derivative"); ok {
+		c.Order = v
+	}
 	r.smoothness(b, c, cols)
 	date := c.Along.Kind == expr.Date
 	if k := b.one("band"); k != nil {
@@ -70,7 +74,7 @@ func (r *reader) curve(b *block, name Name, kinds map[string]string) {
 	readings, names := b.named("reading")
 	for i, k := range readings {
 		r.identifier(names[i], "reading")
-		if q, ok := r.reading(k, names[i], date); ok {
+		if q, ok := r.reading(k, names[i], date); ok && r.suits(k, &q, c.Order) {
 			c.Readings = append(c.Readings, q)
 		}
 	}
@@ -131,6 +135,9 @@ func (r *reader) smoothness(b *block, c *Curve, cols []Column) {
 	}
 }
 
+// nullSpace names what a penalty of each order leaves free.
+var nullSpace = map[int]string{1: "a constant", 2: "a straight line", 3: "a parabola"}
+
 var ruleNames = []string{FixedDF, FixedLambda, GCV, LOOCV, KFold, REML, AICc, KnownSigma, ResidualTarget}
 
 // settings are the arguments that belong to each rule.
@@ -174,7 +181,8 @@ func (r *reader) rule(b *block, c *Curve, cols []Column) Rule {
 	}
 	out.Gap, _ = b.number("gap", false, 0, math.MaxFloat64, "a distance along x of 0 or more")
 	inf := math.MaxFloat64
-	out.DF, _ = b.number("df", n.Text == FixedDF, 2, inf, "degrees of freedom of 2 (a straight line) or more")
+	least := float64(c.Order)
+	out.DF, _ = b.number("df", n.Text == FixedDF, least, inf, fmt.Sprintf("degrees of freedom of %d (%s) or more", c.Order, nullSpace[c.Order]))
 	out.Lambda, _ = b.number("lambda", n.Text == FixedLambda, 5e-324, inf, "a lambda above 0")
 	if v, ok := b.number("inflate", false, 1, 10, "a factor from 1 to 10"); ok {
 		out.Inflate = v
@@ -190,10 +198,11 @@ func (r *reader) rule(b *block, c *Curve, cols []Column) Rule {
 	if out.OneSE = b.flag("one_se"); out.OneSE && out.Shared != "" {
 		r.fail(b.attrs["one_se"].NameRange, "one_se beside shared", "expected one of them")
 	}
-	out.DFAtLeast, _ = b.number("df_at_least", false, 2, inf, "degrees of freedom of 2 or more")
-	out.DFAtMost, _ = b.number("df_at_most", false, 2, inf, "degrees of freedom of 2 or more")
-	if out.DFAtMost > 0 && out.DFAtMost <= max(out.DFAtLeast, 2.01) {
-		r.fail(b.attrs["df_at_most"].Expr.Range(), fmt.Sprintf("df_at_most = %g", out.DFAtMost), "expected more than df_at_least (%g where it is not given)", max(out.DFAtLeast, 2.01))
+	more := fmt.Sprintf("degrees of freedom of %d or more", c.Order)
+	out.DFAtLeast, _ = b.number("df_at_least", false, least, inf, more)
+	out.DFAtMost, _ = b.number("df_at_most", false, least, inf, more)
+	if low := max(out.DFAtLeast, least+0.01); out.DFAtMost > 0 && out.DFAtMost <= low {
+		r.fail(b.attrs["df_at_most"].Expr.Range(), fmt.Sprintf("df_at_most = %g", out.DFAtMost), "expected more than df_at_least (%g where it is not given)", low)
 	}
 	return out
 }
@@ -353,7 +362,7 @@ func (r *reader) grid(b *block, out *Grid, date bool) {
 }
 
 // askers are the arguments that say what a reading is.
-var askers = []string{"value_at", "slope_at", "crosses", "maximum", "minimum", "steepest", "area", "mean", "change", "surely"}
+var askers = []string{"value_at", "slope_at", "curvature_at", "crosses", "maximum", "minimum", "steepest", "area", "mean", "change", "surely"}
 
 // reading reads one reading block.
 func (r *reader) reading(b *block, name Name, date bool) (Reading, bool) {
@@ -385,6 +394,9 @@ func (r *reader) reading(b *block, name Name, date bool) (Reading, bool) {
 		q.At, ok = r.place(e, date)
 	case "slope_at":
 		q.Kind = SlopeAt
+		q.At, ok = r.place(e, date)
+	case "curvature_at":
+		q.Kind = BendAt
 		q.At, ok = r.place(e, date)
 	case "crosses":
 		q.Kind = Crossing
@@ -435,6 +447,19 @@ func (r *reader) reading(b *block, name Name, date bool) (Reading, bool) {
 	}
 	b.finish()
 	return q, ok
+}
+
+// suits tells whether curves of this order have what a reading asks for.
+func (r *reader) suits(b *block, q *Reading, order int) bool {
+	switch {
+	case order == 1 && (q.Kind == SlopeAt || q.Kind == Steepest || q.Kind == Surely):
+		r.fail(b.at, fmt.Sprintf("a slope of a curve of order 1, in the reading %q", q.Name.Text), "expected order = 2 or 3 for slopes: with order 1 the slope has no interval")
+	case order < 3 && q.Kind == BendAt:
+		r.fail(b.at, fmt.Sprintf("a curvature of a curve of order %d, in the reading %q", order, q.Name.Text), "expected order = 3: with a lower order the curvature has no interval")
+	default:
+		return true
+	}
+	return false
 }
 
 func oneOf(what []string) string {

@@ -52,6 +52,7 @@
 //	  response = COLUMN          required, a number
 //	  along    = COLUMN          required, a number or a date
 //	  by       = [COLUMN, ...]   default: one curve
+//	  order    = WHOLE           1, 2 or 3, default 2: the penalty is on that derivative
 //	  weight   = COLUMN          the variance of a row is sigma^2 / weight; default 1
 //	  smoothness { RULE }        required, once
 //	  smoothness "LABEL" {       exceptions, tried before it, the first that holds
@@ -74,7 +75,8 @@
 //	  }
 //	  reading "NAME" {           one of:
 //	    value_at = PLACE
-//	    slope_at = PLACE
+//	    slope_at = PLACE         slopes need order 2 or 3
+//	    curvature_at = PLACE     needs order 3
 //	    crosses  = NUMBER        with direction = rising or falling; all = true for every one
 //	    maximum  = true
 //	    minimum  = true

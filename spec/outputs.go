@@ -77,7 +77,7 @@ func (r *reader) contrast(b *block, name Name, kinds map[string]string) {
 // columns.
 var (
 	FitNumbers = []string{"n", "distinct", "edf", "lambda", "rss", "sigma", "gcv", "loocv", "reml", "score"}
-	FitFlags   = []string{"at_bound", "straight_line", "several_minima", "autocorrelated", "high_leverage", "few_distinct", "extrapolated"}
+	FitFlags   = []string{"at_bound", "straight_line", "constant", "parabola", "target_unreached", "several_minima", "autocorrelated", "high_leverage", "few_distinct", "extrapolated"}
 )
 
 func (r *reader) guard(b *block, name Name, kinds map[string]string) {

@@ -89,6 +89,8 @@ type Curve struct {
 	Weight   *Column  // nil: every row weighs 1
 	Sigma    *Column  // of a rule with sigma = COLUMN: a row weighs 1/sigma^2; never beside Weight
 
+	Order int // of the penalty: 1, 2 or 3
+
 	Rule       Rule        // the rule without `only`
 	Exceptions []Exception // in the order of the file; the first that holds wins
 
@@ -166,6 +168,7 @@ type Grid struct {
 const (
 	ValueAt  = "value"
 	SlopeAt  = "slope"
+	BendAt   = "curvature"
 	Crossing = "crossing"
 	Maximum  = "maximum"
 	Minimum  = "minimum"

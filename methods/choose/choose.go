@@ -88,6 +88,8 @@ type Other struct {
 const (
 	AtBound       = "at_bound"       // the minimum is an end of the range
 	StraightLine  = "straight_line"  // the choice is a straight line, or nearly so
+	Constant      = "constant"       // order 1: the choice is a constant, or nearly so
+	Parabola      = "parabola"       // order 3: the choice is a parabola, or nearly so
 	SeveralMinima = "several_minima" // minima that score within 1% of each other
 
 	TargetUnreached = "target_unreached" // residual_target: no curve in the range comes as near the data as sigma says

@@ -161,6 +161,7 @@ func (s *search) makeFolds(k int) error {
 				x, y, w = append(x, d.RowX[i]), append(y, d.RowY[i]), append(w, d.RowW[i])
 			}
 		}
+		fo.train.Penalty = d.Penalty
 		if err := fo.train.Reset(x, y, w); err != nil {
 			return RangeError{fmt.Sprintf("without fold %d of %d too little is left: %v", f+1, k, err)}
 		}

@@ -482,7 +482,7 @@ func (s *search) record(e *Evidence) {
 func (s *search) endFlags(c Candidate, at end) []string {
 	switch {
 	case c.EDF <= float64(s.d.Null())+leastAbove+1e-3:
-		return []string{StraightLine}
+		return []string{[]string{Constant, StraightLine, Parabola}[s.d.Null()-1]}
 	case at != inner:
 		return []string{AtBound}
 	}

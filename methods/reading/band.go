@@ -25,6 +25,9 @@ type Band struct {
 	From, To     float64 // equal: the stretch of the places asked for
 	NewReading   bool    // for a new reading instead of the curve
 	Weight       float64 // of the new reading; 0: the mean weight of the rows
+
+	Seed  int64  // of draws from the posterior
+	Group string // what draws depend on, beside the seed
 }
 
 // Point is a curve at one x with its interval.
@@ -90,7 +93,7 @@ func Tabulate(f *spline.Fit, b Band, xs []float64, out []Point) []Point {
 		if lo == hi {
 			lo, hi = slices.Min(xs), slices.Max(xs)
 		}
-		r.width = float64(r.simultaneous(lo, hi, b.Level) * r.sigma)
+		r.width = float64(r.simultaneous(lo, hi, &b) * r.sigma)
 	}
 	for _, x := range xs {
 		m := f.Posterior(x)
@@ -129,7 +132,7 @@ type Test struct {
 // that the test of no difference rejects just where the simultaneous band
 // excludes 0 somewhere; of a - b less its mean over xs with draws from the
 // posterior.
-func Difference(a, b *spline.Fit, band Band, xs []float64, seed int64, group string) Contrast {
+func Difference(a, b *spline.Fit, band Band, xs []float64) Contrast {
 	ra, rb := newRuler(a, band.Level), newRuler(b, band.Level)
 	nan := math.NaN()
 	out := Contrast{None: Test{nan, nan}, Same: Test{nan, nan}}
@@ -170,9 +173,16 @@ func Difference(a, b *spline.Fit, band Band, xs []float64, seed int64, group str
 			}
 			return math.Sqrt(given / v)
 		})
-		out.None = Test{largest, tube(largest, kappa, least)}
-		simultaneous = critical(kappa, least, band.Level)
-		out.Same = parallel(&ra, &rb, out.Grid, xs, least, seed, group)
+		if math.IsInf(kappa, 1) { // order 1: no formula, but draws
+			d := drawPair(&ra, &rb, out.Grid, xs, &band, false)
+			out.None = Test{largest, d.beyond(largest, least)}
+			simultaneous = widen(quantile(d.tops, band.Level), least)
+		} else {
+			out.None = Test{largest, tube(largest, kappa, least)}
+			simultaneous = critical(kappa, least, band.Level)
+		}
+		d := drawPair(&ra, &rb, out.Grid, xs, &band, true)
+		out.Same = Test{d.seen, d.beyond(d.seen, least)}
 	}
 	for i := range out.Grid {
 		p := &out.Grid[i]
@@ -212,13 +222,22 @@ func apart(grid []Point, c float64) [][2]float64 {
 	return out
 }
 
-// parallel tests whether the difference is constant over xs.
-func parallel(ra, rb *ruler, grid []Point, xs []float64, df float64, seed int64, group string) Test {
+// pairDraws are draws of the difference of two curves.
+type pairDraws struct {
+	seen float64   // the largest difference in units of its standard error
+	tops []float64 // that of each draw, sorted
+}
+
+// drawPair draws differences at xs, less their mean over xs where centered.
+func drawPair(ra, rb *ruler, grid []Point, xs []float64, b *Band, centered bool) pairDraws {
 	n := len(xs)
 	pa, pb := ra.f.NewPath(xs), rb.f.NewPath(xs)
-	normal := elementary.Normals("parallel", seed, group)
+	normal := elementary.Normals("pair", b.Seed, b.Group)
 	va, vb, slope := make([]float64, n), make([]float64, n), make([]float64, n)
 	center := func(v []float64) {
+		if !centered {
+			return
+		}
 		mean := 0.0
 		for _, q := range v {
 			mean += q
@@ -249,24 +268,20 @@ func parallel(ra, rb *ruler, grid []Point, xs []float64, df float64, seed int64,
 		sd[i] = math.Sqrt(sd[i] / Draws)
 	}
 	center(seen)
-	top := func(v []float64) float64 {
-		t := 0.0
-		for i, q := range v {
-			if sd[i] > 0 {
-				t = max(t, math.Abs(q)/sd[i])
-			}
-		}
-		return t
-	}
-	largest := top(seen)
-	z := elementary.StudentToNormal(largest, df)
-	beyond := 0
+	out := pairDraws{seen: top(seen, sd)}
 	for _, d := range draws {
-		if top(d) >= z {
-			beyond++
-		}
+		out.tops = append(out.tops, top(d, sd))
 	}
-	return Test{largest, float64(beyond+1) / (Draws + 1)}
+	slices.Sort(out.tops)
+	return out
+}
+
+// beyond is the p-value of a largest difference: the share of draws, itself
+// among them, that reach what has its tail probability where sigma is known.
+func (d *pairDraws) beyond(largest, df float64) float64 {
+	z := elementary.StudentToNormal(largest, df)
+	at, _ := slices.BinarySearch(d.tops, z)
+	return float64(len(d.tops)-at+1) / float64(len(d.tops)+1)
 }
 
 // union merges two increasing lists.

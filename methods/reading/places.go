@@ -75,6 +75,15 @@ func root(c *spline.Curve, level, a, b float64) float64 {
 // turning returns the knots and, between them, the places where the slope is
 // zero, in x order.
 func turning(c *spline.Curve) []float64 {
+	switch c.Order {
+	case 1:
+		return c.Knots
+	case 3:
+		return zeros(inflections(c), func(x float64) float64 {
+			_, s, _ := c.At(x)
+			return s
+		})
+	}
 	var out []float64
 	for j := 0; j+1 < len(c.Knots); j++ {
 		out = append(out, c.Knots[j])
@@ -122,6 +131,15 @@ func quadratic(a, b, c float64) (lo, hi float64) {
 // inflections returns the knots and, between them, the places where the
 // second derivative is zero: the slope's extremes are among them.
 func inflections(c *spline.Curve) []float64 {
+	switch c.Order {
+	case 1:
+		return c.Knots
+	case 3:
+		return zeros(kinks(c), func(x float64) float64 {
+			_, _, k := c.At(x)
+			return k
+		})
+	}
 	var out []float64
 	for j := 0; j+1 < len(c.Knots); j++ {
 		out = append(out, c.Knots[j])
@@ -133,4 +151,50 @@ func inflections(c *spline.Curve) []float64 {
 		}
 	}
 	return append(out, c.Knots[len(c.Knots)-1])
+}
+
+// kinks returns the knots of a curve of order 3 and, between them, the places
+// where the third derivative, a parabola, is zero.
+func kinks(c *spline.Curve) []float64 {
+	var out []float64
+	for j := 0; j+1 < len(c.Knots); j++ {
+		out = append(out, c.Knots[j])
+		h := c.Knots[j+1] - c.Knots[j]
+		u1, u2 := quadratic((c.Fourth[j+1]-c.Fourth[j])/(2*h), c.Fourth[j], c.Third[j])
+		for _, u := range [2]float64{u1, u2} {
+			if u > 0 && u < h {
+				if x := c.Knots[j] + u; x > out[len(out)-1] && x < c.Knots[j+1] {
+					out = append(out, x)
+				}
+			}
+		}
+	}
+	return append(out, c.Knots[len(c.Knots)-1])
+}
+
+// zeros adds to cuts, between two of which f is monotone, the places where f is
+// zero.
+func zeros(cuts []float64, f func(x float64) float64) []float64 {
+	out := []float64{cuts[0]}
+	for k := 1; k < len(cuts); k++ {
+		a, b := cuts[k-1], cuts[k]
+		if sa, sb := sign(f(a)), sign(f(b)); sa*sb < 0 {
+			for range 200 {
+				mid := a + float64(0.5*(b-a))
+				if mid <= a || mid >= b {
+					break
+				}
+				if sign(f(mid)) == sa {
+					a = mid
+				} else {
+					b = mid
+				}
+			}
+			if b < cuts[k] {
+				out = append(out, b)
+			}
+		}
+		out = append(out, cuts[k])
+	}
+	return out
 }

@@ -104,9 +104,26 @@ func critical(kappa, df, level float64) float64 {
 
 // simultaneous is the critical value of a band that holds the curve over the
 // whole of [lo, hi] at once.
-func (r *ruler) simultaneous(lo, hi, level float64) float64 {
+//
+// Paths of order 1 are nowhere differentiable, which the formula needs: there
+// it is the quantile of the largest of Draws draws at 257 places.
+func (r *ruler) simultaneous(lo, hi float64, b *Band) float64 {
+	level := b.Level
 	if !(hi > lo) {
 		return elementary.StudentQuantile(0.5*(1+level), r.f.NEDF)
+	}
+	if r.f.Order == 1 {
+		xs := make([]float64, 257)
+		se := make([]float64, len(xs))
+		for i := range xs {
+			xs[i] = lo + float64((hi-lo)*(float64(i)/256))
+			m := r.f.Posterior(xs[i])
+			se[i] = math.Sqrt(m.VarValue)
+		}
+		var tops []float64
+		r.paths("band", b.Seed, b.Group, xs, func(value, _ []float64) { tops = append(tops, top(value, se)) })
+		slices.Sort(tops)
+		return widen(quantile(tops, level), r.f.NEDF)
 	}
 	kappa := length(r.f.Knots, lo, hi, func(x float64) float64 {
 		m := r.f.Posterior(x)
@@ -117,14 +134,25 @@ func (r *ruler) simultaneous(lo, hi, level float64) float64 {
 
 // paths draws curves at xs and calls each with the deviations of value and
 // slope over sigma.
-func (r *ruler) paths(what string, a *Ask, xs []float64, each func(value, slope []float64)) {
+func (r *ruler) paths(what string, seed int64, group string, xs []float64, each func(value, slope []float64)) {
 	p := r.f.NewPath(xs)
-	normal := elementary.Normals(what, a.Seed, a.Group)
+	normal := elementary.Normals(what, seed, group)
 	value, slope := make([]float64, len(xs)), make([]float64, len(xs))
 	for range Draws {
 		p.Draw(normal, value, slope)
 		each(value, slope)
 	}
+}
+
+// top is the largest deviation in units of its standard error.
+func top(v, se []float64) float64 {
+	t := 0.0
+	for i, q := range v {
+		if se[i] > 0 {
+			t = max(t, math.Abs(q)/se[i])
+		}
+	}
+	return t
 }
 
 // quantile returns the smallest of sorted values that at least the given share
@@ -168,14 +196,8 @@ func (r *ruler) surely(a Ask) []Result {
 		mean[i], se[i] = m.Slope, math.Sqrt(m.VarSlope)
 	}
 	var tops []float64
-	r.paths("slopes", &a, xs, func(_, slope []float64) {
-		top := 0.0
-		for i, s := range slope {
-			if se[i] > 0 {
-				top = max(top, math.Abs(s)/se[i])
-			}
-		}
-		tops = append(tops, top)
+	r.paths("slopes", a.Seed, a.Group, xs, func(_, slope []float64) {
+		tops = append(tops, top(slope, se))
 	})
 	slices.Sort(tops)
 	c := float64(widen(quantile(tops, r.level), r.f.NEDF) * r.sigma)
@@ -202,31 +224,23 @@ func (r *ruler) surely(a Ask) []Result {
 	return out
 }
 
-// steepestPlace gives the place of the steepest slope its interval: the middle
-// share of where it lies in curves drawn from the posterior, on the grid.
-func (r *ruler) steepestPlace(a Ask) (lower, upper float64, ok bool) {
+// placeByDraws gives the place of an extreme its interval: the middle share of
+// where the largest score lies in curves drawn from the posterior, on the grid.
+func (r *ruler) placeByDraws(a Ask, what string, score func(value, slope float64) float64) (lower, upper float64, ok bool) {
 	xs := r.inside(a.Grid)
 	if len(xs) < 3 || r.width == 0 {
 		return 0, 0, false
 	}
-	mean := make([]float64, len(xs))
+	value, slope := make([]float64, len(xs)), make([]float64, len(xs))
 	for i, x := range xs {
-		_, mean[i], _ = r.f.At(x)
+		value[i], slope[i], _ = r.f.At(x)
 	}
 	var places []float64
-	r.paths("steepest", &a, xs, func(_, slope []float64) {
+	r.paths(what, a.Seed, a.Group, xs, func(v, s []float64) {
 		best, at := math.Inf(-1), 0
-		for i, s := range slope {
-			v := mean[i] + float64(r.sigma*s)
-			switch a.Direction {
-			case "falling":
-				v = -v
-			case "rising":
-			default:
-				v = math.Abs(v)
-			}
-			if v > best {
-				best, at = v, i
+		for i := range xs {
+			if q := score(value[i]+float64(r.sigma*v[i]), slope[i]+float64(r.sigma*s[i])); q > best {
+				best, at = q, i
 			}
 		}
 		places = append(places, xs[at])

@@ -38,7 +38,7 @@ func TestTubeAgainstDraws(t *testing.T) {
 			}
 			var tops []float64
 			for rep := range 4 {
-				r.paths("test", &Ask{Seed: int64(rep)}, xs, func(value, _ []float64) {
+				r.paths("test", int64(rep), "", xs, func(value, _ []float64) {
 					top := 0.0
 					for i, v := range value {
 						top = max(top, math.Abs(v)/se[i])

@@ -12,6 +12,7 @@ import (
 const (
 	Value    = "value"
 	Slope    = "slope"
+	Bend     = "curvature"
 	Crossing = "crossing"
 	Maximum  = "maximum"
 	Minimum  = "minimum"
@@ -30,7 +31,7 @@ type Ask struct {
 	All       bool    // Crossing: every one, not the first alone
 	From, To  float64 // Area, Mean, Change
 
-	Grid  []float64 // Surely, Steepest: where slopes are compared
+	Grid  []float64 // Surely, Steepest; of order 1 Maximum, Minimum: where draws are compared
 	Seed  int64     // of draws from the posterior
 	Group string    // the fit's name, which draws depend on
 }
@@ -58,6 +59,8 @@ const None = "none in the observed range"
 // AtEnd is the note of an extreme that lies at an end of the data.
 const AtEnd = "at the end of the observed range"
 
+const noInterval = "no interval is given for this place"
+
 const beyondData = "beyond the data"
 
 // Take takes one reading at the given level of confidence.
@@ -70,6 +73,9 @@ func Take(f *spline.Fit, level float64, a Ask) []Result {
 	case Slope:
 		m := f.Posterior(a.At)
 		return []Result{r.number(Slope, a.At, m.Slope, m.VarSlope)}
+	case Bend:
+		m := f.Posterior(a.At)
+		return []Result{r.number(Bend, a.At, m.Curvature, m.VarCurvature)}
 	case Area, Mean, Change:
 		return []Result{r.over(a)}
 	case Surely:
@@ -77,7 +83,7 @@ func Take(f *spline.Fit, level float64, a Ask) []Result {
 	case Crossing:
 		return r.crossings(a)
 	case Maximum, Minimum:
-		return r.extreme(a.Kind)
+		return r.extreme(a)
 	case Steepest:
 		return r.steepest(a)
 	}
@@ -263,8 +269,8 @@ func (r *ruler) walk(x, end float64, holds func(float64) bool) (place float64, o
 // extreme finds the highest or lowest point on the observed range. The
 // interval of its place is the stretch about it on which the slope's band
 // holds 0: {x: |g'(x)| <= t se(g'(x))}.
-func (r *ruler) extreme(kind string) []Result {
-	sign := 1.0
+func (r *ruler) extreme(a Ask) []Result {
+	kind, sign := a.Kind, 1.0
 	if kind == Minimum {
 		sign = -1
 	}
@@ -277,6 +283,16 @@ func (r *ruler) extreme(kind string) []Result {
 	m := r.f.Posterior(at)
 	height := r.number(kind, at, m.Value, m.VarValue)
 	place := Result{Kind: kind + "_at", At: m.Value, Value: at}
+	if r.f.Order == 1 { // a path of a Wiener process has no slope
+		place.Lower, place.Upper, place.Note = math.NaN(), math.NaN(), noInterval
+		if lower, upper, ok := r.placeByDraws(a, "extreme", func(value, _ float64) float64 { return float64(sign * value) }); ok {
+			place.Lower, place.Upper, place.Note = min(lower, at), max(upper, at), ""
+		}
+		if at == r.lo || at == r.hi {
+			height.Note = AtEnd
+		}
+		return []Result{height, place}
+	}
 	flat := func(x float64) bool {
 		m := r.f.Posterior(x)
 		return math.Abs(m.Slope) <= r.half(m.VarSlope)
@@ -323,13 +339,17 @@ func (r *ruler) steepest(a Ask) []Result {
 			{Kind: Steepest + "_at", At: nan, Value: nan, Lower: nan, Upper: nan, Note: None}}
 	}
 	slope := r.number(Steepest, at, m.Slope, m.VarSlope)
-	place := Result{Kind: Steepest + "_at", At: m.Slope, Value: at, Lower: math.NaN(), Upper: math.NaN(), Note: "no interval is given for this place"}
-	var ok bool
-	if place.Lower, place.Upper, ok = r.steepestPlace(a); ok {
-		place.Note = ""
-		place.Lower, place.Upper = min(place.Lower, at), max(place.Upper, at)
-	} else {
-		place.Lower, place.Upper = math.NaN(), math.NaN()
+	place := Result{Kind: Steepest + "_at", At: m.Slope, Value: at, Lower: math.NaN(), Upper: math.NaN(), Note: noInterval}
+	if lower, upper, ok := r.placeByDraws(a, "steepest", func(_, slope float64) float64 {
+		switch direction {
+		case "falling":
+			return -slope
+		case "rising":
+			return slope
+		}
+		return math.Abs(slope)
+	}); ok {
+		place.Lower, place.Upper, place.Note = min(lower, at), max(upper, at), ""
 	}
 	if at == r.lo || at == r.hi {
 		slope.Note = AtEnd

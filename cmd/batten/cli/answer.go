@@ -210,7 +210,7 @@ func (e *env) printValues(values []runner.Values, def *spec.Curve) error {
 	}
 	notes := []string{fmt.Sprintf("%g%% pointwise band.", 100*def.Band.Level)}
 	if beyond {
-		notes = append(notes, "* beyond the data: the curve goes on straight there by assumption.")
+		notes = append(notes, "* beyond the data: the curve goes on there by assumption.")
 	}
 	reports.Table(e.out, header, rows, notes, width(e.out))
 	return nil
