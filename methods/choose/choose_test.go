@@ -211,8 +211,11 @@ func TestNoBetterOnAFineGrid(t *testing.T) {
 	several := 0
 	for seed := range uint64(400) {
 		x, y := noisy(12+int(seed%70), seed)
-		d, err := spline.Collapse(x, y, nil)
-		if err != nil {
+		d := &spline.Data{Penalty: 2}
+		if seed >= 200 {
+			d.Penalty = 1 + 2*int(seed%2) // 1 and 3
+		}
+		if err := d.Reset(x, y, nil); err != nil {
 			t.Fatal(err)
 		}
 		for _, name := range []string{GCV, LOOCV, REML, AICc, KnownSigma} {
@@ -559,7 +562,7 @@ func TestKnownBytes(t *testing.T) {
 			}
 		}
 	}
-	const want, version = "f9facf09a0fd9ac0427a1d563d4d7197", 1
+	const want, version = "f7f7122618600f296f1cc0323a0d7bc4", 1
 	got := hex.EncodeToString(h.Sum(nil))[:32]
 	switch {
 	case got != want && Version == version:

@@ -223,7 +223,7 @@ func stationary(c *[stencil]float64, derivatives bool) (shift float64, inside bo
 			flo *= 0.5
 		}
 	}
-	return float64((0.5*(lo+hi) - middle) * fine), true
+	return float64((float64(0.5*(lo+hi)) - middle) * fine), true
 }
 
 // best is the lowest of the minima, the smoother of equals.

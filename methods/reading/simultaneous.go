@@ -40,7 +40,7 @@ func length(cuts []float64, lo, hi float64, rate func(x float64) float64) float6
 	at := lo
 	first, last := cuts[0], cuts[len(cuts)-1]
 	for w := first - lo; at < min(first, hi) && w > 0; w /= 2 { // beyond the data, ever shorter pieces
-		to := min(at+0.5*w, hi)
+		to := min(at+float64(0.5*w), hi)
 		if w < 0.02*(first-lo) {
 			to = min(first, hi)
 		}
@@ -165,7 +165,7 @@ func quantile(sorted []float64, share float64) float64 {
 // widen turns a critical value of standard normals into one of Student's t with
 // the same tail.
 func widen(z, df float64) float64 {
-	return elementary.StudentQuantile(0.5*(1+float64(1-2*elementary.StudentTail(z, math.Inf(1)))), df)
+	return elementary.StudentQuantile(1-elementary.StudentTail(z, math.Inf(1)), df)
 }
 
 // inside keeps the places of a grid that lie within the observed range.
@@ -246,6 +246,6 @@ func (r *ruler) placeByDraws(a Ask, what string, score func(value, slope float64
 		places = append(places, xs[at])
 	})
 	slices.Sort(places)
-	tail := 0.5 * (1 - r.level)
+	tail := float64(0.5 * (1 - r.level))
 	return quantile(places, tail), quantile(places, 1-tail), true
 }

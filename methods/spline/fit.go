@@ -90,6 +90,7 @@ type Fit struct {
 	Leverage []float64 // S_jj of each knot: d g(x_j) / d (mean response at x_j)
 	Gap      []float64 // mean response less g at each knot, free of cancellation
 	info     []float64 // precision of g at the knot from all other readings
+	doubt    []float64 // size of the terms that a curvature is the sum of
 	forward  []state
 	backward []state
 	one      *curve1 // order 1
@@ -136,6 +137,7 @@ func (ws *Workspace) FitInto(f *Fit, d *Data, lambda float64) {
 	f.backward = append(f.backward[:0], ws.backward[:m]...)
 	f.Value, f.Curvature = grow(f.Value, m), grow(f.Curvature, m)
 	f.Leverage, f.Gap, f.info = grow(f.Leverage, m), grow(f.Gap, m), grow(f.info, m)
+	f.doubt = grow(f.doubt, m)
 	q := 1 / lambda
 	y, w := d.yc, d.W
 	for i := range f.Knots {
@@ -146,10 +148,42 @@ func (ws *Workspace) FitInto(f *Fit, d *Data, lambda float64) {
 		f.Gap[i] = r
 		f.info[i] = j
 		f.Leverage[i] = w[i] / (w[i] + j)
-		f.Value[i] = g + d.shift
-		f.Curvature[i] = -float64(float64(kap*(a+float64(b*g))) * q)
+		f.Value[i] = g + d.line(i)
+		pull := float64(kap * q)
+		f.Curvature[i] = -float64(pull * (a + float64(b*g)))
+		f.doubt[i] = float64(pull * (math.Abs(f.forward[i].alpha) + math.Abs(f.backward[i].alpha) + math.Abs(float64(b*g))))
 	}
 	f.Curvature[0], f.Curvature[m-1] = 0, 0
+	if q > 0 {
+		f.moments(q)
+	}
+}
+
+// moments mends the curvature where the filters' accounts of the slope cancel
+// to little, as they do near the straight line. The Euler equation gives it from
+// the residuals of either side, whose relative accuracy is full:
+//
+//	lambda g”(x_i) = sum_(j<i) w_j r_j (x_i - x_j) = sum_(j>i) w_j r_j (x_j - x_i)
+//
+// Of the three the one is taken whose terms are smallest.
+func (f *Fit) moments(q float64) {
+	m, w := len(f.Knots), f.Data.W
+	side := func(first, step int) {
+		var force, moment, sizeF, size float64
+		for i := first; i+step > 0 && i+step < m-1; i += step {
+			v := float64(w[i] * f.Gap[i])
+			force += v
+			sizeF += math.Abs(v)
+			h := math.Abs(f.Knots[i+step] - f.Knots[i])
+			moment += float64(force * h)
+			size += float64(sizeF * h)
+			if k := i + step; float64(size*q) < f.doubt[k] {
+				f.Curvature[k], f.doubt[k] = float64(moment*q), float64(size*q)
+			}
+		}
+	}
+	side(0, 1)
+	side(m-1, -1)
 }
 
 func grow[T any](s []T, n int) []T {

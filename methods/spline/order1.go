@@ -144,10 +144,10 @@ func (d *Data) leftOut(i int, k int32, j, n float64) float64 {
 	for o := d.First[i]; o < d.First[i+1]; o++ {
 		if o != k {
 			j += d.RowW[o]
-			n += float64(d.RowW[o] * (d.RowY[o] - d.shift))
+			n += float64(d.RowW[o] * d.level(d.RowY[o], i))
 		}
 	}
-	return d.RowY[k] - d.shift - n/j
+	return d.level(d.RowY[k], i) - n/j
 }
 
 func (s *sums) add(o *sums) {
@@ -232,7 +232,7 @@ func fit1(f *curve1, ws *memory1, d *Data, lambda float64) {
 		f.Gap[i] = r
 		f.info[i] = j
 		f.Leverage[i] = w[i] / (w[i] + j)
-		f.Value[i] = y[i] - r + d.shift
+		f.Value[i] = y[i] - r + d.line(i)
 	}
 }
 

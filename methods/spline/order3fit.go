@@ -34,8 +34,9 @@ func fit3(f *curve3, ws *memory3, d *Data, lambda float64) {
 		f.Gap[i] = r
 		f.info[i] = o.j
 		f.Leverage[i] = w[i] / (w[i] + o.j)
-		f.Value[i] = g + d.shift
+		f.Value[i] = g + d.line(i)
 		f.Slope[i], f.Curvature[i] = o.lower(g, kf, kg)
+		f.Slope[i] += d.tilt
 		f.Third[i], f.Fourth[i] = o.higher(g, q)
 	}
 	f.end(0, 1)
@@ -48,7 +49,7 @@ func (f *curve3) end(i, k int) {
 	h := f.Knots[i] - f.Knots[k]
 	hg := float64(h * f.Third[k])
 	f.Curvature[i] = f.Curvature[k] + hg/3
-	f.Slope[i] = f.Slope[k] + float64(h*(f.Curvature[k]+0.25*hg))
+	f.Slope[i] = f.Slope[k] + float64(h*(f.Curvature[k]+float64(0.25*hg)))
 	f.Third[i], f.Fourth[i] = 0, 0
 }
 

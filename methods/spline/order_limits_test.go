@@ -62,10 +62,7 @@ func TestNISTPontius(t *testing.T) {
 	for i := range x {
 		x[i] = 150000 * float64(i%20+1)
 	}
-	d, err := Collapse(x, y, nil)
-	if err != nil {
-		t.Fatal(err)
-	}
+	d := collapseOrder(3, x, y, nil)
 	var f curve3
 	fit3(&f, &memory3{}, d, math.Inf(1))
 	p := f.posterior(0)
@@ -100,10 +97,7 @@ func TestNISTNumAcc(t *testing.T) {
 		for i := range x {
 			x[i] = float64(i * i)
 		}
-		d, err := Collapse(x, y, nil)
-		if err != nil {
-			t.Fatal(err)
-		}
+		d := collapseOrder(1, x, y, nil)
 		var f curve1
 		fit1(&f, &memory1{}, d, math.Inf(1))
 		near(t, "edf", f.EDF, 1, 1e-14, 1)
@@ -115,6 +109,7 @@ func TestNISTNumAcc(t *testing.T) {
 
 // TestOrderLong compares long fits with the banded form in 512 bits.
 func TestOrderLong(t *testing.T) {
+	t.Parallel()
 	sizes := []int{1000, 5000}
 	if testing.Short() {
 		sizes = sizes[:1]
@@ -132,10 +127,7 @@ func TestOrderLong(t *testing.T) {
 			}
 			whole := math.Pow(at, float64(2*m-1)) * float64(n)
 			for _, lambda := range []float64{0.01, 30, 1e-9 * whole, 1e-3 * whole, 10 * whole} {
-				d, err := Collapse(x, y, w)
-				if err != nil {
-					t.Fatal(err)
-				}
+				d := collapseOrder(m, x, y, w)
 				got := evaluateOrder(m, d, lambda)
 				want := band(m, x, y, w, lambda)
 				const tol = 1e-11
@@ -182,10 +174,7 @@ func TestOrderInvariants(t *testing.T) {
 	for seed := range uint64(20) {
 		x, y, w := sample(8+int(seed)*3, seed)
 		for _, m := range []int{1, 3} {
-			d, err := Collapse(x, y, w)
-			if err != nil {
-				t.Fatal(err)
-			}
+			d := collapseOrder(m, x, y, w)
 			if len(d.X) <= m {
 				continue
 			}
@@ -193,8 +182,8 @@ func TestOrderInvariants(t *testing.T) {
 			for i := range x {
 				twice[i], mirror[i] = 2*x[i], -x[i]
 			}
-			d2, _ := Collapse(twice, y, w)
-			dm, _ := Collapse(mirror, y, w)
+			d2 := collapseOrder(m, twice, y, w)
+			dm := collapseOrder(m, mirror, y, w)
 			var w1 memory1
 			var w3 memory3
 			var f1 curve1

@@ -203,7 +203,8 @@ type truthM struct {
 	edf, rest       float64
 	rss, loo, rough float64
 	reml            float64
-	lambdaTimesPen  float64 // lambda * roughness
+	lambdaTimesPen  float64   // lambda * roughness
+	bend            []float64 // band, order 2: g” at the inner knots
 }
 
 func (s *saddle) truth() truthM {
@@ -391,5 +392,10 @@ func band(m int, x, y, w []float64, lambda float64) truthM {
 	}
 	t.edf, t.rest, t.rss, t.loo = f64(edf), f64(rest), f64(rss), f64(quo2(loo, bf(float64(n))))
 	t.rough = f64(pen)
+	for j := range k {
+		if m == 2 { // the hat of area 1 about knot j+1 has the height 2/(x_(j+2) - x_j)
+			t.bend = append(t.bend, f64(quo2(mul2(bf(2), gam[j]), sub2(at[j+2], at[j]))))
+		}
+	}
 	return t
 }

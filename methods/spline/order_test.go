@@ -128,6 +128,7 @@ func (e worst) check(t *testing.T, name, what string, got, want, scale, tol floa
 // random, in clusters (gap ratios to 1e4, for order 1 to 1e8) and tied, weights
 // over six orders of magnitude, edf from order+1e-4 to distinct x less 1e-3.
 func TestOrderOracle(t *testing.T) {
+	t.Parallel()
 	trials := 20
 	if testing.Short() {
 		trials = 6
