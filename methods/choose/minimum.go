@@ -100,8 +100,13 @@ func (s *search) endMinimum(k int) point {
 		df = s.lo
 	}
 	if end := l[k]; math.Abs(end.EDF-df) <= loosely*df && len(l) > 2 {
-		lo, hi := end.u-0.01, end.u+0.01
-		p := s.at(s.root(df, lo, s.edf(lo), hi, s.edf(hi), nearly))
+		var four [4]point // about it, for a polynomial as in reach
+		s.points(four[:0], end.u-0.006, end.u-0.002, end.u+0.002, end.u+0.006)
+		p := s.at(s.reach(four[:], df))
+		if math.Abs(p.EDF-df) > nearly*df {
+			lo, hi := end.u-0.01, end.u+0.01
+			p = s.at(s.root(df, lo, s.edf(lo), hi, s.edf(hi), nearly))
+		}
 		p.end = end.end
 		s.lattice[k] = p
 		return p

@@ -89,7 +89,15 @@ func against(t fataler, d *Data, lambda float64, e worst, tol float64) {
 	f := ws.Fit(d, lambda)
 	want := band(2, d.X, d.Y, d.W, lambda)
 	name := fmt.Sprintf("n %d, lambda %g, edf %g", d.N, lambda, want.edf)
+	base := tol
 	check := func(what string, got, want, scale float64) {
+		tol := base
+		if what == "LOOCV" || what == "g''" {
+			// near interpolation a row left out of a tight pair is predicted
+			// along the next pair's slope, a million times the data away, and
+			// the bend between pairs is the difference of such slopes
+			tol *= 10
+		}
 		off := math.Abs(got-want) / scale
 		if got == want {
 			off = 0

@@ -138,8 +138,9 @@ func (ws *Workspace) Criteria(d *Data, lambda float64) Criteria {
 // compiler keeps in registers.
 func (ws *Workspace) filter(d *Data, q float64, wantDet bool) (det logProduct) {
 	m := len(d.X)
-	if cap(ws.forward) < m {
-		ws.forward, ws.backward = make([]state, m+m/4), make([]state, m+m/4)
+	if cap(ws.forward) < m || cap(ws.backward) < m {
+		room := m + min(m/4, 4096)
+		ws.forward, ws.backward = make([]state, room), make([]state, room)
 	}
 	fw, bw := ws.forward[:m], ws.backward[:m]
 	x, y, w := d.X[:m], d.yc[:m], d.W[:m]

@@ -133,8 +133,9 @@ func (ws *Workspace) FitInto(f *Fit, d *Data, lambda float64) {
 	f.Criteria = ws.evaluate(d, lambda, true)
 	f.Data = d
 	f.Knots = append(f.Knots[:0], d.X...)
-	f.forward = append(f.forward[:0], ws.forward[:m]...)
-	f.backward = append(f.backward[:0], ws.backward[:m]...)
+	// the fit keeps the filters' states; the workspace goes on with the fit's old memory
+	f.forward, ws.forward = ws.forward[:m], f.forward
+	f.backward, ws.backward = ws.backward[:m], f.backward
 	f.Value, f.Curvature = grow(f.Value, m), grow(f.Curvature, m)
 	f.Leverage, f.Gap, f.info = grow(f.Leverage, m), grow(f.Gap, m), grow(f.info, m)
 	f.doubt = grow(f.doubt, m)

@@ -11,6 +11,7 @@ import (
 	"math/rand/v2"
 	"os"
 	"path/filepath"
+	"runtime"
 	"strconv"
 	"testing"
 
@@ -308,4 +309,38 @@ func BenchmarkFit(b *testing.B) {
 			b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/float64(n), "ns/point")
 		})
 	}
+}
+
+// TestMemory: a long curve, its lambda searched, takes less than 250 bytes a
+// point in all.
+func TestMemory(t *testing.T) {
+	const n = 400_000
+	x, y, w := sample(n, 8)
+	for i := range x {
+		x[i] = float64(i) // no ties
+	}
+	heap := func() float64 {
+		var m runtime.MemStats
+		runtime.GC()
+		runtime.GC()
+		runtime.ReadMemStats(&m)
+		return float64(m.HeapAlloc)
+	}
+	before := heap()
+	d, err := Collapse(x, y, w)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var ws Workspace
+	var out [2]Criteria
+	ws.CriteriaAt(d, []float64{1e3, 1e5}, out[:])
+	f := ws.Fit(d, 1e4)
+	got := (heap() - before) / n
+	t.Logf("%.0f bytes a point", got)
+	if got > 250 {
+		t.Errorf("%.0f bytes a point", got)
+	}
+	runtime.KeepAlive(f)
+	runtime.KeepAlive(d)
+	runtime.KeepAlive(x)
 }
