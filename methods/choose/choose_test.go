@@ -598,3 +598,31 @@ func BenchmarkChoose(b *testing.B) {
 		}
 	}
 }
+
+// BenchmarkLong times the choice by gcv and the fit for one long curve.
+func BenchmarkLong(b *testing.B) {
+	for _, n := range []int{10_000, 100_000, 1_000_000} {
+		b.Run(fmt.Sprintf("n=%d", n), func(b *testing.B) {
+			rng := rand.New(rand.NewPCG(1, uint64(n)))
+			x, y := make([]float64, n), make([]float64, n)
+			for i := range x {
+				x[i] = (float64(i) + 0.8*rng.Float64()) / float64(n)
+				y[i] = math.Sin(20*x[i]) + 0.3*rng.NormFloat64()
+			}
+			d, err := spline.Collapse(x, y, nil)
+			if err != nil {
+				b.Fatal(err)
+			}
+			var ws spline.Workspace
+			var f spline.Fit
+			for b.Loop() {
+				e, err := Lambda(&ws, d, Rule{Name: GCV})
+				if err != nil {
+					b.Fatal(err)
+				}
+				ws.FitInto(&f, d, e.Chosen.Lambda)
+			}
+			b.ReportMetric(b.Elapsed().Seconds()/float64(b.N)/float64(n)*1e9, "ns/point")
+		})
+	}
+}
