@@ -78,7 +78,11 @@ func (r *reader) curve(b *block, name Name, kinds map[string]string) {
 			c.Readings = append(c.Readings, q)
 		}
 	}
-	b.finish("smoothness", "band", "grid", "reading")
+	c.Tolerance = Tolerance{HalfWidths: 0.25}
+	if k := b.one("tolerance"); k != nil {
+		c.Tolerance = r.tolerance(k, c.Readings)
+	}
+	b.finish("smoothness", "band", "grid", "reading", "tolerance")
 }
 
 // smoothness reads a curve's rule and its exceptions.

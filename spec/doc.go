@@ -73,6 +73,11 @@
 //	    from   = PLACE           instead of the observed ends
 //	    to     = PLACE
 //	  }
+//	  tolerance {                from where on a fit counts as moved; any one does
+//	    half_widths = NUMBER     of the accepted band; without the block 0.25
+//	    response    = NUMBER     in the response's unit
+//	    readings    = { READING = NUMBER, ... }   in the readings' units
+//	  }
 //	  reading "NAME" {           one of:
 //	    value_at = PLACE
 //	    slope_at = PLACE         slopes need order 2 or 3

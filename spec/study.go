@@ -97,7 +97,24 @@ type Curve struct {
 	Band     Band
 	Grid     Grid
 	Readings []Reading
-	Range    hcl.Range
+
+	Tolerance Tolerance
+	Range     hcl.Range
+}
+
+// Tolerance says from where on a fit counts as moved against the ledger. What
+// is 0 is not looked at.
+type Tolerance struct {
+	Given      bool    // a tolerance block stands in the spec
+	HalfWidths float64 // of the old band; 0.25 where no block is given
+	Response   float64 // in the response's unit
+	Readings   []ReadingTolerance
+}
+
+// ReadingTolerance is the largest change of a reading that does not count.
+type ReadingTolerance struct {
+	Name  string
+	Limit float64 // in the reading's unit; days for a date
 }
 
 // Rule names for Rule.Name.
