@@ -8,9 +8,10 @@ import (
 )
 
 // HTML writes the report as one self-contained page: no script, no fetch.
-func HTML(d *Document) []byte {
+func HTML(d *Document) []byte { return htmlPage(d.Title, build(d)) }
+
+func htmlPage(title string, nodes []node) []byte {
 	h := &page{}
-	nodes := build(d)
 	h.b.WriteString(`<!doctype html>
 <html lang="en">
 <head>
@@ -18,7 +19,7 @@ func HTML(d *Document) []byte {
 <meta http-equiv="Content-Security-Policy" content="default-src 'none'; style-src 'unsafe-inline'">
 <meta name="viewport" content="width=device-width, initial-scale=1">
 <meta name="color-scheme" content="light dark">
-<title>` + text(d.Title) + `</title>
+<title>` + text(title) + `</title>
 <style>
 ` + style() + `</style>
 </head>

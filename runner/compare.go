@@ -66,7 +66,7 @@ type RowChange struct{ Old, New, Added, Removed, Edited int }
 // ReadingChange is a reading before and after.
 type ReadingChange struct {
 	Name, Unit string
-	IsPlace    bool
+	IsDate     bool // its values are days
 	Old, New   ledger.Value
 	Moved      bool // beyond the curve's tolerance
 }

@@ -11,6 +11,7 @@ import (
 	"batten/runner/ledger"
 	"batten/runner/table"
 	"batten/spec"
+	"batten/spec/expr"
 )
 
 // fit compares one fit with its old self.
@@ -100,7 +101,7 @@ func (k *comparer) judgeMovement(c *spec.Curve, d *derived, m *Movement) {
 		q := &m.Readings[i]
 		for _, r := range d.readings {
 			if readingName(r) == q.Name {
-				q.Unit, q.IsPlace = unitOf(c, r.Kind), isPlace(r.Kind)
+				q.Unit, q.IsDate = unitOf(c, r.Kind), isPlace(r.Kind) && c.Along.Kind == expr.Date
 			}
 		}
 		if readingBeyond(t, q.Name, q.Old.Value, q.New.Value) {
@@ -114,7 +115,7 @@ func (k *comparer) judgeMovement(c *spec.Curve, d *derived, m *Movement) {
 // shape is the old curve at the ledger's places, with its band's half-widths
 // and readings.
 func (b *before) shape(ft *fitter) (from, to float64, curve, half []float64, readings []ledger.Value, err error) {
-	if e := b.entry; e != nil {
+	if e := b.entry; b.fit == nil {
 		return e.From, e.To, e.Curve, e.HalfWidth, e.Readings, nil
 	}
 	at := slices.Index(b.cf.fits, b.fit)
