@@ -3,6 +3,7 @@ package runner
 import (
 	"context"
 	"fmt"
+	"io"
 	"path/filepath"
 	"sort"
 	"strings"
@@ -13,6 +14,7 @@ import (
 	"batten/reports"
 	"batten/runner/ledger"
 	"batten/runner/store"
+	"batten/runner/table"
 	"batten/spec"
 )
 
@@ -178,6 +180,11 @@ type Answer struct {
 	Candidates int
 	Accepted   *ledger.Entry // the accepted fit, or nil
 	Ledger     string
+	History    History     // of the rule's text
+	Lines      []FileLines // of the fit's rows
+	LinesNote  string      // why Lines is not known, or ""
+	Order      int
+	trace      func(io.Writer) error
 	Matches    []string // the groups that match, where there is more than one
 }
 
@@ -220,6 +227,16 @@ func (r *Recorded) Why(ctx context.Context, curve string, match []Match) (*Answe
 		a.Skipped = cf.verdict[i].Why
 	}
 	a.Candidates = len(f.candidates())
+	a.Order = cf.def.Order
+	a.History = ruleHistory(ctx, r.Study, curve, f.Exception, r.Record.Inputs)
+	a.Lines, a.LinesNote = r.fitLines(ctx, cf, f.Group)
+	a.trace = func(w io.Writer) error {
+		x := &exporter{cf: one, what: spec.ExportEvidence}
+		if err := table.Header(w, append(append([]string(nil), one.by...), x.columns()...)); err != nil {
+			return err
+		}
+		return x.write(ctx, w, 1)
+	}
 	old, err := ledger.ReadCurve(ledgerDir(r.Study), curve)
 	if err != nil {
 		return nil, err
@@ -276,3 +293,7 @@ func (r *Recorded) Read(curve string, match []Match, xs []float64) ([]Values, *s
 	}
 	return out, cf.def, nil
 }
+
+// Trace writes the fit's evidence as the evidence export does: every candidate
+// with its scores.
+func (a *Answer) Trace(w io.Writer) error { return a.trace(w) }

@@ -8,11 +8,12 @@ import (
 
 	"batten/reports"
 	"batten/runner"
+	"batten/runner/store"
 	"batten/runner/table"
 )
 
 func (e *env) why() *cobra.Command {
-	var run string
+	var run, trace string
 	c := &cobra.Command{
 		Use:   "why STUDY CURVE [col=value ...]",
 		Short: "How this curve was chosen, from the record",
@@ -34,6 +35,11 @@ record and the store under .batten, not the data.`,
 			if len(a.Matches) > 0 {
 				return severalGroups(args[1], a.Matches)
 			}
+			if trace != "" {
+				if err := writeTrace(trace, a); err != nil {
+					return err
+				}
+			}
 			if e.json {
 				return e.printWhyJSON(a)
 			}
@@ -41,6 +47,7 @@ record and the store under .batten, not the data.`,
 			return nil
 		},
 	}
+	c.Flags().StringVar(&trace, "trace", "", "write the candidates and their scores to this CSV file")
 	c.Flags().StringVar(&run, "run", "", "a recorded run (default: the last)")
 	return c
 }
@@ -81,8 +88,18 @@ func (e *env) printWhy(a *runner.Answer) {
 	if c.Rows.ZeroWeight > 0 {
 		para("  left out %d with weight 0", c.Rows.ZeroWeight)
 	}
+	lines := map[string]runner.FileLines{}
+	for _, l := range a.Lines {
+		lines[l.Path] = l
+	}
 	for _, in := range a.Record.Inputs {
-		fmt.Fprintf(w, "  from %s (SHA-256 %.16s...)\n", in.Path, in.SHA256)
+		para("  from %s (SHA-256 %.16s...)", in.Path, in.SHA256)
+		if l, ok := lines[in.Path]; ok {
+			para("    %s, on lines %s", count(l.N, "row", "rows"), l.Lines)
+		}
+	}
+	if a.LinesNote != "" {
+		para("  (%s)", a.LinesNote)
 	}
 	fmt.Fprintln(w)
 
@@ -95,6 +112,7 @@ func (e *env) printWhy(a *runner.Answer) {
 		}
 	}
 	para("Rule: %s", rule)
+	para("  %s", historyText(&a.History))
 	if a.Skipped != "" {
 		para("\nThere is no curve: %s.", a.Skipped)
 		return
@@ -122,12 +140,77 @@ func (e *env) printWhy(a *runner.Answer) {
 	switch {
 	case a.Accepted != nil:
 		para("\nLedger: edf %.2f, lambda %.4g, %d rows (%s).", a.Accepted.EDF, a.Accepted.Lambda, a.Accepted.N, a.Ledger)
+		e.printAccepted(a, wide)
 	case a.Ledger != "":
 		para("\nLedger: this fit is not in it (%s).", a.Ledger)
 	default:
 		para("\nLedger: nothing has been accepted yet.")
 	}
 	para("Run %s, finished %s, %s; spec SHA-256 %.16s...", a.Run, a.Finished, a.Record.Program, a.Record.Spec.SHA256)
+}
+
+// historyText says when the rule got its text, and whether that was after the
+// data arrived.
+func historyText(h *runner.History) string {
+	if h.Unknown != "" {
+		return "When it was last changed is not known: " + h.Unknown + "."
+	}
+	if h.Changed == nil {
+		return "As it was run it has not been committed."
+	}
+	s := fmt.Sprintf("Last changed %s by %s (commit %.10s: %s)", h.Changed.When[:min(10, len(h.Changed.When))], h.Changed.Who, h.Changed.ID, h.Changed.Subject)
+	if h.Unchanged {
+		s = strings.Replace(s, "Last changed", "Unchanged since the spec was first committed,", 1)
+	}
+	switch {
+	case len(h.Data) == 0:
+		return s + "; when the data arrived is not known: they are not in git."
+	case h.After:
+		return s + "; that was AFTER data that it chose from were committed."
+	}
+	return s + "; before the data were last committed."
+}
+
+// printAccepted sets readings beside those that were accepted.
+func (e *env) printAccepted(a *runner.Answer, wide int) {
+	var rows [][]string
+	seen := map[string]bool{}
+	for _, r := range a.Fit.Readings {
+		name := r.Name
+		if strings.HasSuffix(r.Kind, "_at") {
+			name += "_at"
+		}
+		if seen[name] {
+			continue
+		}
+		seen[name] = true
+		for _, old := range a.Accepted.Readings {
+			if old.Name != name {
+				continue
+			}
+			val, _, _ := reports.ReadingText(a.Curve.X, r)
+			was := r
+			was.Value, was.Lower, was.Upper = old.Value, old.Lower, old.Upper
+			before, lo, hi := reports.ReadingText(a.Curve.X, was)
+			rows = append(rows, []string{name, val, before, lo, hi, r.Unit})
+		}
+	}
+	if len(rows) > 0 {
+		reports.Table(e.out, []string{"reading", "now", "accepted", "lower", "upper", "unit"}, rows, nil, wide)
+	}
+}
+
+// writeTrace writes the evidence table whole or not at all.
+func writeTrace(path string, a *runner.Answer) error {
+	f, err := store.Create(path)
+	if err != nil {
+		return err
+	}
+	if err := a.Trace(f); err != nil {
+		f.Abort()
+		return err
+	}
+	return f.Commit()
 }
 
 func (e *env) printReadings(a *runner.Answer, wide int) {
@@ -239,6 +322,7 @@ func (e *env) printWhyJSON(a *runner.Answer) error {
 		"fit": f.Name, "group": group, "run": a.Run, "finished": a.Finished, "n": f.N, "distinct": f.Distinct,
 		"rule": f.Rule, "exception": f.Exception, "chosen": chosen, "why": f.Evidence.Why, "candidates": candidates,
 		"minima": minima, "others": others, "flags": flags, "readings": readings, "record": a.Record,
+		"order": a.Order, "rule_history": historyJSON(&a.History), "lines": linesJSON(a),
 	}
 	if a.Skipped != "" {
 		out["skipped"] = a.Skipped
@@ -253,3 +337,42 @@ func (e *env) printWhyJSON(a *runner.Answer) error {
 // isFigure tells whether an output is a figure of a report: there may be
 // hundreds, so their names are not printed.
 func isFigure(path string) bool { return strings.HasSuffix(path, ".svg") }
+
+func historyJSON(h *runner.History) any {
+	type commit struct {
+		ID      string `json:"commit"`
+		When    string `json:"when"`
+		Who     string `json:"who"`
+		Subject string `json:"subject"`
+		Path    string `json:"path,omitempty"`
+	}
+	out := map[string]any{"unchanged_since_first": h.Unchanged, "after_data": h.After}
+	if h.Unknown != "" {
+		return map[string]any{"unknown": h.Unknown}
+	}
+	if h.Changed != nil {
+		out["changed"] = commit(*h.Changed)
+	}
+	data := []commit{}
+	for _, d := range h.Data {
+		data = append(data, commit(d))
+	}
+	out["data"] = data
+	return out
+}
+
+func linesJSON(a *runner.Answer) any {
+	type lines struct {
+		Path  string `json:"path"`
+		Rows  int    `json:"rows"`
+		Lines string `json:"lines"`
+	}
+	if a.LinesNote != "" {
+		return map[string]any{"unknown": a.LinesNote}
+	}
+	out := []lines{}
+	for _, l := range a.Lines {
+		out = append(out, lines{l.Path, l.N, l.Lines})
+	}
+	return out
+}
