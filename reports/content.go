@@ -33,6 +33,7 @@ type (
 	gallery struct {
 		pictures []picture
 		small    bool
+		even     bool // all of one size
 	}
 	fold struct {
 		summary string
@@ -437,7 +438,7 @@ func contrastSection(c *Contrast, index int) []node {
 		c.Of, c.Minus[0], c.Minus[1], c.Across, c.BandKind, percent(c.Level))}}
 	g := grid{caption: "Do the curves differ, and do they run parallel? P by Holm's method over the pairs in brackets.",
 		header: []string{"group", "no difference", "parallel", "surely apart over " + c.X.label()}, right: []bool{false, true, true, false}}
-	pics := gallery{}
+	pics := gallery{even: true}
 	for i := range c.Pairs {
 		p := &c.Pairs[i]
 		var s []string

@@ -86,8 +86,11 @@ func (h *page) nodes(ns []node) {
 
 func (h *page) gallery(g gallery) {
 	class := "figures"
-	if g.small {
+	switch {
+	case g.small:
 		class = "multiples"
+	case g.even:
+		class = "multiples even"
 	}
 	open := false
 	for _, p := range g.pictures {
@@ -216,6 +219,7 @@ figcaption{font-size:.8rem;color:var(--soft);line-height:1.35;margin-top:.15rem}
 .figures{display:grid;grid-template-columns:minmax(0,2fr) minmax(0,1fr);gap:.8rem 1.6rem;margin:1rem 0;align-items:start;max-width:64rem}
 .figures figure:first-child{grid-row:span 2}
 .multiples{display:grid;grid-template-columns:repeat(auto-fill,minmax(11.5rem,1fr));gap:1rem .9rem;margin:1rem 0}
+.multiples.even{grid-template-columns:repeat(auto-fill,minmax(17rem,1fr))}
 .multiples figcaption{order:-1;color:var(--ink)}
 .multiples figure{display:flex;flex-direction:column}
 details{border-top:1px solid var(--rule);padding:.1rem 0}
