@@ -33,6 +33,8 @@ type Record struct {
 	Curves   []CurveRecord `json:"curves"`
 	Counts   Counts        `json:"fits"`
 	Moved    []Move        `json:"moved"`
+	Ledger   string        `json:"ledger,omitempty"` // the acceptance that Moved is against, in a line
+	Dated    string        `json:"dated,omitempty"`  // the day that reports bear
 	Outputs  []Output      `json:"outputs"`
 	Refused  []string      `json:"refused,omitempty"`
 }

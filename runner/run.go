@@ -34,6 +34,8 @@ type Options struct {
 	Progress Progress
 	Program  string // name, version and commit, for the record
 	Now      func() time.Time
+
+	again *Record // a replay: what the ledger and the day were then
 }
 
 func (o *Options) fill() {
@@ -110,12 +112,17 @@ func Execute(ctx context.Context, s *spec.Study, opt Options) (*Run, error) {
 	if err := r.sameInputs(); err != nil {
 		return nil, err
 	}
-	if r.state, err = ledger.ReadState(ledgerDir(s)); err != nil {
-		return nil, err
-	}
 	r.Record = r.record(started)
-	if err := r.findMoved(ctx); err != nil {
-		return nil, err
+	if then := opt.again; then != nil {
+		r.Record.Moved, r.Record.Ledger, r.Record.Dated = then.Moved, then.Ledger, then.Dated
+	} else {
+		if r.state, err = ledger.ReadState(ledgerDir(s)); err != nil {
+			return nil, err
+		}
+		r.Record.Ledger, r.Record.Dated = r.Ledger(), dated()
+		if err := r.findMoved(ctx); err != nil {
+			return nil, err
+		}
 	}
 	r.Record.Results = r.results()
 	var refused error

@@ -51,6 +51,10 @@ type Input struct {
 	Decimal   byte     // '.' or ','
 	Columns   []Column
 	Expects   []Expect
+
+	// Instead says where recorded files lie, by their recorded paths. Parse
+	// leaves it nil; a replay sets it.
+	Instead map[string]string
 }
 
 // Expect is a condition every row of an input must meet.

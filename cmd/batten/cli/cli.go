@@ -64,15 +64,17 @@ func status(err error) int {
 		data     *runner.DataError
 		refused  *runner.RefusedError
 		moved    *runner.MovedError
+		missing  *runner.MissingInputsError
+		differs  *differsError
 	)
 	switch {
 	case err == nil:
 		return Done
 	case errors.As(err, &mistakes), errors.As(err, &usage), errors.As(err, &line):
 		return Wrong
-	case errors.As(err, &data), errors.As(err, &refused):
+	case errors.As(err, &data), errors.As(err, &refused), errors.As(err, &missing):
 		return BadData
-	case errors.As(err, &moved):
+	case errors.As(err, &moved), errors.As(err, &differs):
 		return Differs
 	}
 	return Failed
@@ -144,7 +146,7 @@ STUDY is a spec file, or a folder that holds study.hcl.`,
 	})
 	root.PersistentFlags().BoolVar(&e.json, "json", false, "print the answer as JSON")
 	root.PersistentFlags().BoolVarP(&e.quiet, "quiet", "q", false, "no progress, no table: only what went wrong")
-	root.AddCommand(e.check(), e.run(), e.why(), e.read(), e.accept(), e.graph(), e.compare())
+	root.AddCommand(e.check(), e.run(), e.why(), e.read(), e.accept(), e.graph(), e.compare(), e.replay())
 	root.CompletionOptions.HiddenDefaultCmd = false
 	for _, c := range root.Commands() {
 		wrapArgs(c)
