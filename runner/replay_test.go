@@ -8,6 +8,7 @@ import (
 	"path/filepath"
 	"strings"
 	"testing"
+	"time"
 
 	"batten/spec"
 )
@@ -110,5 +111,25 @@ func TestReplay(t *testing.T) {
 	}
 	if got := outputs(t, dir)["fits.csv"]; got != bad {
 		t.Error("a replay touched the study's outputs")
+	}
+}
+
+// TestClockRunsBackwards: records are ordered by their count, not by the clock.
+func TestClockRunsBackwards(t *testing.T) {
+	dir := write(t, "gcv", map[string][]string{"d.csv": rowsOf(2, 20)})
+	s, err := spec.Load(dir)
+	if err != nil {
+		t.Fatal(err)
+	}
+	at := time.Date(2026, 6, 1, 0, 0, 0, 0, time.UTC)
+	for range 3 {
+		if _, err := Execute(context.Background(), s, Options{Now: func() time.Time { return at }}); err != nil {
+			t.Fatal(err)
+		}
+		at = at.AddDate(-1, 0, 0)
+	}
+	last, err := lastRecord(dir)
+	if err != nil || !strings.HasPrefix(last.Run, "000003-") || !strings.HasPrefix(last.Started, "2024") {
+		t.Errorf("the last run is %+v, %v", last, err)
 	}
 }
