@@ -59,6 +59,15 @@ func (r *Run) Document(ctx context.Context, title string, show []string, brief b
 		}
 		d.Contrasts = append(d.Contrasts, *doc)
 	}
+	for _, g := range r.Record.Guards {
+		otherwise := ""
+		for _, def := range s.Guards {
+			if def.Name.Text == g.Guard {
+				otherwise = def.Otherwise
+			}
+		}
+		d.Guards = append(d.Guards, reports.Guard{Name: g.Guard, On: g.On, Require: g.Require, Otherwise: otherwise, Reason: g.Reason, Outcome: g.Outcome, Failed: g.Failed})
+	}
 	for _, m := range r.Record.Moved {
 		d.Summary.Moved = append(d.Summary.Moved, reports.Move{
 			Fit: m.Fit, What: strings.Join(m.What, ", "), Shift: val(m.Shift), At: val(m.At), AtText: m.AtText,

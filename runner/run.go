@@ -19,6 +19,7 @@ import (
 	"os"
 	"path/filepath"
 	"runtime"
+	"strings"
 	"sync/atomic"
 	"time"
 
@@ -123,6 +124,9 @@ func Execute(ctx context.Context, s *spec.Study, opt Options) (*Run, error) {
 		if err := r.findMoved(ctx); err != nil {
 			return nil, err
 		}
+	}
+	if err := r.judgeWhole(); err != nil {
+		return nil, err
 	}
 	r.Record.Results = r.results()
 	var refused error
@@ -257,6 +261,9 @@ func (r *Run) results() string {
 		for _, v := range c.Verdicts {
 			k.add("verdict", v.Fit, v.Outcome, v.Why)
 		}
+	}
+	for _, g := range r.Record.Guards {
+		k.add("guard", g.Guard, g.Outcome, strings.Join(g.Failed, "; "))
 	}
 	return k.digest()
 }
