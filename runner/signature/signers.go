@@ -71,6 +71,9 @@ func parseSigner(l string) (signer, error) {
 		if g.principals, rest, ok = strings.Cut(quoted, `"`); !ok {
 			return g, errors.New("a quotation mark is not closed")
 		}
+		if rest != "" && rest[0] != ' ' && rest[0] != '\t' {
+			return g, errors.New("after the quoted principals a blank is missing")
+		}
 	} else if i := strings.IndexAny(l, " \t"); i > 0 {
 		g.principals, rest = l[:i], l[i:]
 	}
