@@ -87,6 +87,9 @@ func AcceptAs(ctx context.Context, s *spec.Study, consent Consent, opt Options) 
 	if err := ledger.Write(ledgerDir(s), change); err != nil {
 		return nil, err
 	}
+	if last := r.state.Last(); last != nil && last.Signer != "" && consent.Key == nil {
+		opt.Progress.Note("the ledger is no longer signed: the signature was of the acceptance before, and was taken away (accept --sign KEYFILE signs anew)")
+	}
 	return t.state.Last(), nil
 }
 

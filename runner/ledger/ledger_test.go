@@ -353,3 +353,17 @@ func TestFormatOne(t *testing.T) {
 		t.Errorf("%+v, %v", a, err)
 	}
 }
+
+// TestManifest: lines in the order in which a shell lists the files (LC_ALL=C).
+func TestManifest(t *testing.T) {
+	s := &State{Curves: []CurveHeader{{Name: "b", SHA256: "3"}, {Name: "a", SHA256: "2"}, {Name: "a-b", SHA256: "1"}}}
+	// SHA-256 of no bytes: FIPS 180-4, as known by heart and printed by sha256sum /dev/null
+	want := "e3b0c44298fc1c149afbf4c8996fb92427ae41e4649b934ca495991b7852b855  ledger/study.json\n" +
+		"1  ledger/a-b.csv\n2  ledger/a.csv\n3  ledger/b.csv\n"
+	if got := string(s.manifest(nil)); got != want {
+		t.Errorf("manifest\n%s\nwant\n%s", got, want)
+	}
+	if s.Curves[0].Name != "b" {
+		t.Error("the caller's order was changed")
+	}
+}

@@ -231,13 +231,13 @@ func (s *State) header(name string) *CurveHeader {
 }
 
 // manifest is what a signature covers: the digests of study.json, whose bytes
-// are given, and of every curve's file, one a line, as sha256sum prints them
-// in the study's folder.
+// are given, and of every curve's file, one a line, as sha256sum prints them in
+// the study's folder: study.json, then the others by the bytes of their names.
 func (s *State) manifest(study []byte) []byte {
 	var b bytes.Buffer
 	fmt.Fprintf(&b, "%s  ledger/study.json\n", table.SHA256(study))
 	heads := slices.Clone(s.Curves)
-	slices.SortFunc(heads, func(x, y CurveHeader) int { return strings.Compare(x.Name, y.Name) })
+	slices.SortFunc(heads, func(x, y CurveHeader) int { return strings.Compare(x.Name+".csv", y.Name+".csv") })
 	for _, h := range heads {
 		fmt.Fprintf(&b, "%s  ledger/%s.csv\n", h.SHA256, h.Name)
 	}
