@@ -79,6 +79,13 @@ func build(d *Document) []node {
 	for i := range d.Contrasts {
 		out = append(out, contrastSection(&d.Contrasts[i], i)...)
 	}
+	if len(d.Guards) > 0 {
+		g := grid{caption: "Guards on contrasts, inputs and the study", header: []string{"guard", "on", "requires", "otherwise", "reason", "outcome", "found"}, right: make([]bool, 7)}
+		for _, e := range d.Guards {
+			g.rows = append(g.rows, []string{e.Name, e.On, e.Require, e.Otherwise, e.Reason, e.Outcome, some(e.Failed)})
+		}
+		out = append(out, heading{2, "Guards"}, g)
+	}
 	out = append(out, howToRead(rules, orders, pointwise, len(d.Contrasts) > 0)...)
 	return append(out, record(&d.Record)...)
 }

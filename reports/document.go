@@ -17,6 +17,7 @@ type Document struct {
 	Dated     string // ISO date, or "" (then no date is printed)
 	Curves    []Curve
 	Contrasts []Contrast
+	Guards    []Guard // on contrasts, inputs and the study; Outcome is set
 	Record    Record
 	Summary   Summary
 }
@@ -91,7 +92,8 @@ type Exception struct {
 // Guard is a condition with how it went.
 type Guard struct {
 	Name, Require, Otherwise, Reason string
-	Failed                           []string // group labels
+	On, Outcome                      string   // of a guard on no curve: what it stands on, and held, warn or refuse
+	Failed                           []string // group labels; what was found
 }
 
 // Skipped is a group without a fit.

@@ -27,7 +27,7 @@ func document() *Document {
 		Weight: "fruit", Rule: "gcv", Level: 0.95, BandFor: "the curve",
 		Rows:       RowCount{Read: 30, Used: 24, ZeroWeight: 1, Dropped: []Count{{"bruised", "bruised fruit", 3}}, SetAside: []Count{{"firmness", "firmness is missing", 2}}},
 		Exceptions: []Exception{{"pilot", `cultivar == "Pilot"`, "fixed_df, df = 4", "four visits only", []string{"cultivar=B, store=air"}}},
-		Guards:     []Guard{{"enough", "n >= 8", "skip", "too few", []string{"cultivar=C, store=air"}}},
+		Guards:     []Guard{{Name: "enough", Require: "n >= 8", Otherwise: "skip", Reason: "too few", Failed: []string{"cultivar=C, store=air"}}},
 		Readings:   []string{"release", "peak"},
 		Skipped:    []Skipped{{Group: "cultivar=C, store=air", N: 3, Distinct: 2, Why: "2 distinct x, a curve needs 3"}},
 	}

@@ -71,6 +71,11 @@ func Terminal(w io.Writer, d *Document, opt TerminalOptions) {
 			fmt.Fprintln(w, on+wrapText(fmt.Sprintf("%s %s: %s", word, s.Group, s.Why), opt.Width, "    ")+off)
 		}
 	}
+	for _, g := range d.Guards {
+		if g.Outcome != "held" {
+			fmt.Fprintln(w, alarm+wrapText(fmt.Sprintf("guard %q on %s (%s): %s does not hold: %s", g.Name, g.On, g.Outcome, g.Require, some(g.Failed)), opt.Width, "  ")+plain)
+		}
+	}
 	fmt.Fprintln(w)
 	switch {
 	case d.Summary.Ledger == "":

@@ -270,3 +270,39 @@ func TestTolerance(t *testing.T) {
 		}
 	}
 }
+
+// TestToleranceInRuns: a run counts as moved what the spec's tolerance says.
+func TestToleranceInRuns(t *testing.T) {
+	rows := rowsOf(3, 30)
+	moved := func(tolerance string) []Move {
+		t.Helper()
+		dir := write(t, "gcv", map[string][]string{"d.csv": rows})
+		text := strings.Replace(studyText, "RULE", "gcv", 1)
+		if tolerance != "" {
+			text = strings.Replace(text, "  reading \"top\"", "  tolerance {\n    "+tolerance+"\n  }\n  reading \"top\"", 1)
+		}
+		put(t, dir, "study.hcl", text)
+		r := execute(t, dir, 2)
+		if _, err := Accept(context.Background(), r.Study, "a start", Options{}); err != nil {
+			t.Fatal(err)
+		}
+		other := append([]string(nil), rows...)
+		f := strings.Split(other[75], ",") // of g02
+		f[2] = "4.9"
+		other[75] = strings.Join(f, ",")
+		put(t, dir, "d.csv", rowsText(other))
+		return execute(t, dir, 2).Record.Moved
+	}
+	if m := moved(""); len(m) != 1 || m[0].Fit != "c[g=g02]" {
+		t.Fatalf("without a tolerance: %+v", m)
+	}
+	if m := moved("half_widths = 50"); len(m) != 0 {
+		t.Errorf("a wide tolerance: %+v", m)
+	}
+	if m := moved("response = 1e-3"); len(m) != 1 || m[0].What[0] != "shifted" {
+		t.Errorf("a narrow one in the response's unit: %+v", m)
+	}
+	if m := moved("readings = { mean = 1e-9 }"); len(m) != 1 || m[0].What[0] != "mean moved" {
+		t.Errorf("one of a reading: %+v", m)
+	}
+}

@@ -27,10 +27,10 @@ const briefLimit = 400
 // in full, and readings only where the fits are few.
 func (r *Run) Document(ctx context.Context, title string, show []string, brief bool) (*reports.Document, error) {
 	s := r.Study
-	d := &reports.Document{Title: title, Study: s.Title, Owner: s.Owner, Dated: dated()}
+	d := &reports.Document{Title: title, Study: s.Title, Owner: s.Owner, Dated: r.Record.Dated}
 	d.Summary = reports.Summary{
 		Total: r.Record.Counts.Total, Fitted: r.Record.Counts.Computed + r.Record.Counts.Reused,
-		Skipped: r.Record.Counts.Skipped, Refused: r.Record.Counts.Refused, Ledger: r.Ledger(),
+		Skipped: r.Record.Counts.Skipped, Refused: r.Record.Counts.Refused, Ledger: r.Record.Ledger,
 	}
 	shown := map[string]bool{}
 	for _, n := range show {
@@ -58,6 +58,15 @@ func (r *Run) Document(ctx context.Context, title string, show []string, brief b
 			return nil, err
 		}
 		d.Contrasts = append(d.Contrasts, *doc)
+	}
+	for _, g := range r.Record.Guards {
+		otherwise := ""
+		for _, def := range s.Guards {
+			if def.Name.Text == g.Guard {
+				otherwise = def.Otherwise
+			}
+		}
+		d.Guards = append(d.Guards, reports.Guard{Name: g.Guard, On: g.On, Require: g.Require, Otherwise: otherwise, Reason: g.Reason, Outcome: g.Outcome, Failed: g.Failed})
 	}
 	for _, m := range r.Record.Moved {
 		d.Summary.Moved = append(d.Summary.Moved, reports.Move{

@@ -5,6 +5,7 @@ import (
 	"math"
 	"slices"
 
+	"batten/methods/choose"
 	"batten/spec"
 	"batten/spec/expr"
 )
@@ -35,6 +36,9 @@ func judge(s *spec.Study, cf *curveFits) {
 	for _, g := range s.Guards {
 		if g.On != cf.def.Name.Text {
 			continue
+		}
+		if g.Readings && cf.taken == nil {
+			cf.takeReadings()
 		}
 		held := g.Require.Eval(cf.quantities(), len(cf.fits))
 		for i, t := range held.Truth {
@@ -97,6 +101,8 @@ func (cf *curveFits) quantities() func(string) *expr.Column {
 			return fitted(func(f *storedFit) float64 { return f.LOOCV })
 		case "reml":
 			return fitted(func(f *storedFit) float64 { return f.REML })
+		case "aicc":
+			return fitted(func(f *storedFit) float64 { return choose.AICC(f.N, f.RSS, f.EDF) })
 		case "score":
 			return fitted(func(f *storedFit) float64 { return f.Score })
 		}
@@ -104,6 +110,9 @@ func (cf *curveFits) quantities() func(string) *expr.Column {
 			if b.Name.Text == name {
 				return cf.byColumn(k)
 			}
+		}
+		if c, ok := cf.taken[name]; ok {
+			return c
 		}
 		c := &expr.Column{Kind: expr.Bool, Truth: make([]uint8, len(cf.fits))}
 		for i, f := range cf.fits {

@@ -5,7 +5,6 @@ import (
 	"math"
 	"path/filepath"
 	"slices"
-	"strings"
 
 	"batten/runner/ledger"
 	"batten/spec"
@@ -25,9 +24,6 @@ type Move struct {
 }
 
 const (
-	// shiftTolerance is how far a curve may lie from the accepted one, in
-	// half-widths of the accepted band, before it counts as moved.
-	shiftTolerance = 0.25
 	// edfTolerance is the change of edf that counts: what two printed
 	// decimals show.
 	edfTolerance = 0.005
@@ -59,18 +55,7 @@ func entries(ctx context.Context, cf *curveFits, want func(fit string) bool, wor
 			e.Curve = append(e.Curve, p.Value)
 			e.HalfWidth = append(e.HalfWidth, halfWidth(p))
 		}
-		seen := map[string]bool{}
-		for _, r := range d.readings {
-			name := r.def.Name.Text
-			if strings.HasSuffix(r.Kind, "_at") {
-				name += "_at"
-			}
-			if seen[name] { // of several crossings the first is the ledger's
-				continue
-			}
-			seen[name] = true
-			e.Readings = append(e.Readings, ledger.Value{Name: name, Value: r.Value, Lower: r.Lower, Upper: r.Upper})
-		}
+		e.Readings = readingValues(d.readings)
 		out[i] = e
 		return nil
 	})
@@ -113,33 +98,40 @@ func moved(ctx context.Context, cf *curveFits, old *ledger.Accepted, workers int
 		if o.Key == f.Key[:16] {
 			return nil // the same rows, rule and methods: the same fit
 		}
-		fit, err := ft.open(f)
+		t := &cf.def.Tolerance
+		d, err := ft.derive(cf, i, wants{readings: len(t.Readings) > 0})
 		if err != nil {
 			return err
 		}
-		shift, where := 0.0, math.NaN()
+		shift, by, where := 0.0, 0.0, math.NaN()
 		for k, x := range places(o.From, o.To) {
 			if k >= len(o.Curve) {
 				break
 			}
-			v, _, _ := fit.At(x)
-			d := math.Abs(v - o.Curve[k])
+			v, _, _ := d.fit.At(x)
 			// The ledger keeps seven digits; less than that is no movement.
-			if d <= 1e-6*math.Abs(o.Curve[k]) {
+			if math.Abs(v-o.Curve[k]) <= 1e-6*math.Abs(o.Curve[k]) {
 				continue
 			}
-			if s := d / o.HalfWidth[k]; s > shift {
-				shift, where = s, x
+			if s := math.Abs(v-o.Curve[k]) / o.HalfWidth[k]; s > shift {
+				shift, by, where = s, v-o.Curve[k], x
 			}
 		}
-		if shift > shiftTolerance {
+		if shiftBeyond(t, shift, by) {
 			m.What = append(m.What, "shifted")
 		}
-		if math.Abs(f.EDF-o.EDF) >= edfTolerance {
+		if !t.Given && math.Abs(f.EDF-o.EDF) >= edfTolerance {
 			m.What = append(m.What, "edf changed")
 		}
-		if f.Rule != o.Rule || f.Exception != o.Exception {
+		if !t.Given && (f.Rule != o.Rule || f.Exception != o.Exception) {
 			m.What = append(m.What, "rule changed")
+		}
+		for _, now := range readingValues(d.readings) {
+			for _, was := range o.Readings {
+				if was.Name == now.Name && readingBeyond(t, now.Name, was.Value, now.Value) {
+					m.What = append(m.What, now.Name+" moved")
+				}
+			}
 		}
 		if len(m.What) == 0 {
 			return nil

@@ -177,8 +177,8 @@ func (r *Run) writeReport(ctx context.Context, st *store.Store, rep *spec.Report
 	k.add("program", r.Record.Program, r.Record.Go)
 	k.add("results", r.results())
 	k.add("title", rep.Title)
-	k.add("dated", dated())
-	k.add("ledger", r.Ledger())
+	k.add("dated", r.Record.Dated)
+	k.add("ledger", r.Record.Ledger)
 	for _, m := range r.Record.Moved {
 		k.add("moved", m.Fit, strings.Join(m.words(), ","), val(m.Shift), val(m.At), val(m.OldEDF), val(m.NewEDF))
 	}

@@ -33,6 +33,9 @@ type Record struct {
 	Curves   []CurveRecord `json:"curves"`
 	Counts   Counts        `json:"fits"`
 	Moved    []Move        `json:"moved"`
+	Ledger   string        `json:"ledger,omitempty"` // the acceptance that Moved is against, in a line
+	Dated    string        `json:"dated,omitempty"`  // the day that reports bear
+	Guards   []GuardResult `json:"guards,omitempty"` // those on contrasts, inputs and the study
 	Outputs  []Output      `json:"outputs"`
 	Refused  []string      `json:"refused,omitempty"`
 }

@@ -97,7 +97,7 @@ func source(s *spec.Study, in *spec.Input) table.Source {
 	src := table.Source{
 		Name: in.Name.Text, Root: s.Dir, Pattern: in.File, Missing: in.Missing,
 		Separator: in.Separator, Decimal: in.Decimal, Outside: in.Outside,
-		At: at(s, in.FileRange.Start.Line, in.FileRange.Start.Column),
+		At: at(s, in.FileRange.Start.Line, in.FileRange.Start.Column), Instead: in.Instead,
 	}
 	for _, c := range in.Columns {
 		header := c.Input

@@ -19,6 +19,7 @@ import (
 	"os"
 	"path/filepath"
 	"runtime"
+	"strings"
 	"sync/atomic"
 	"time"
 
@@ -34,6 +35,8 @@ type Options struct {
 	Progress Progress
 	Program  string // name, version and commit, for the record
 	Now      func() time.Time
+
+	again *Record // a replay: what the ledger and the day were then
 }
 
 func (o *Options) fill() {
@@ -110,11 +113,19 @@ func Execute(ctx context.Context, s *spec.Study, opt Options) (*Run, error) {
 	if err := r.sameInputs(); err != nil {
 		return nil, err
 	}
-	if r.state, err = ledger.ReadState(ledgerDir(s)); err != nil {
-		return nil, err
-	}
 	r.Record = r.record(started)
-	if err := r.findMoved(ctx); err != nil {
+	if then := opt.again; then != nil {
+		r.Record.Moved, r.Record.Ledger, r.Record.Dated = then.Moved, then.Ledger, then.Dated
+	} else {
+		if r.state, err = ledger.ReadState(ledgerDir(s)); err != nil {
+			return nil, err
+		}
+		r.Record.Ledger, r.Record.Dated = r.Ledger(), dated()
+		if err := r.findMoved(ctx); err != nil {
+			return nil, err
+		}
+	}
+	if err := r.judgeWhole(); err != nil {
 		return nil, err
 	}
 	r.Record.Results = r.results()
@@ -250,6 +261,9 @@ func (r *Run) results() string {
 		for _, v := range c.Verdicts {
 			k.add("verdict", v.Fit, v.Outcome, v.Why)
 		}
+	}
+	for _, g := range r.Record.Guards {
+		k.add("guard", g.Guard, g.Outcome, strings.Join(g.Failed, "; "))
 	}
 	return k.digest()
 }

@@ -120,9 +120,13 @@
 //	}
 //
 //	guard "NAME" {
-//	  on        = CURVE          required
-//	  require   = CONDITION      required, over FitNumbers, FitFlags and the by columns
-//	  otherwise = warn, skip or refuse   required
+//	  on        = CURVE, CONTRAST, INPUT or study   required
+//	  require   = CONDITION      required. On a curve over FitNumbers, FitFlags, the by columns
+//	                             and readings: NAME, NAME_lower, NAME_upper, of an extreme
+//	                             NAME_at; on a contrast over ContrastNumbers and the by columns
+//	                             that remain; on an input over InputNumbers, on the study over
+//	                             StudyNumbers. What is missing does not hold
+//	  otherwise = warn, skip or refuse   required; skip on curves only
 //	  reason    = TEXT
 //	}
 //

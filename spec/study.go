@@ -51,6 +51,10 @@ type Input struct {
 	Decimal   byte     // '.' or ','
 	Columns   []Column
 	Expects   []Expect
+
+	// Instead says where recorded files lie, by their recorded paths. Parse
+	// leaves it nil; a replay sets it.
+	Instead map[string]string
 }
 
 // Expect is a condition every row of an input must meet.
@@ -224,9 +228,10 @@ const (
 // Guard is a condition on each fit of a curve, with a consequence.
 type Guard struct {
 	Name      Name
-	On        string        // a curve
+	On        string        // a curve, a contrast, an input, or OnStudy
 	Require   *expr.Program // Bool, over FitColumns and the by columns
-	BeforeFit bool          // Require uses only n, distinct and by columns
+	BeforeFit bool          // on a curve: Require uses only n, distinct and by columns
+	Readings  bool          // on a curve: Require uses readings
 	Otherwise string
 	Reason    string
 	Source    string // Require as written

@@ -16,6 +16,7 @@ import (
 	"fmt"
 	"io"
 	"io/fs"
+	"maps"
 	"os"
 	"path/filepath"
 	"slices"
@@ -38,6 +39,10 @@ type Source struct {
 	Separator byte     // 0: a tab for .tsv, else a comma
 	Decimal   byte     // '.' or ','
 	At        string   // where the spec names the file, for messages
+
+	// Instead, where it is not nil, says where the files lie by the paths that
+	// they go by; Pattern is not looked for.
+	Instead map[string]string
 }
 
 // Column is one column to read.
@@ -104,6 +109,9 @@ func (e *NotFoundError) Is(target error) bool { return target == fs.ErrNotExist 
 // Find returns the paths of a source's files, relative to Root, in the order
 // of their names.
 func Find(src Source) ([]string, error) {
+	if src.Instead != nil {
+		return slices.Sorted(maps.Keys(src.Instead)), nil
+	}
 	full := filepath.FromSlash(src.Pattern)
 	if !filepath.IsAbs(full) {
 		full = filepath.Join(src.Root, full)
@@ -172,6 +180,9 @@ func folder(pattern string) string {
 }
 
 func (s *Source) full(path string) string {
+	if p, ok := s.Instead[path]; ok {
+		return p
+	}
 	p := filepath.FromSlash(path)
 	if filepath.IsAbs(p) {
 		return p

@@ -67,15 +67,17 @@ func status(err error) int {
 		moved    *runner.MovedError
 		key      *signature.KeyError
 		unsound  *runner.UnsoundError
+		missing  *runner.MissingInputsError
+		differs  *differsError
 	)
 	switch {
 	case err == nil:
 		return Done
 	case errors.As(err, &mistakes), errors.As(err, &usage), errors.As(err, &line), errors.As(err, &key):
 		return Wrong
-	case errors.As(err, &data), errors.As(err, &refused), errors.As(err, &unsound):
+	case errors.As(err, &data), errors.As(err, &refused), errors.As(err, &unsound), errors.As(err, &missing):
 		return BadData
-	case errors.As(err, &moved):
+	case errors.As(err, &moved), errors.As(err, &differs):
 		return Differs
 	}
 	return Failed
@@ -147,7 +149,7 @@ STUDY is a spec file, or a folder that holds study.hcl.`,
 	})
 	root.PersistentFlags().BoolVar(&e.json, "json", false, "print the answer as JSON")
 	root.PersistentFlags().BoolVarP(&e.quiet, "quiet", "q", false, "no progress, no table: only what went wrong")
-	root.AddCommand(e.check(), e.run(), e.why(), e.read(), e.accept(), e.graph(), e.compare())
+	root.AddCommand(e.check(), e.run(), e.why(), e.read(), e.accept(), e.graph(), e.compare(), e.replay(), e.sweep())
 	root.CompletionOptions.HiddenDefaultCmd = false
 	for _, c := range root.Commands() {
 		wrapArgs(c)

@@ -1,0 +1,216 @@
+package cli
+
+import (
+	"io/fs"
+	"os"
+	"os/exec"
+	"path/filepath"
+	"runtime"
+	"strings"
+	"testing"
+)
+
+// ran runs the program in a process of its own.
+func ran(args ...string) (out string, status int) {
+	c := command(args...)
+	b, _ := c.CombinedOutput()
+	return string(b), c.ProcessState.ExitCode()
+}
+
+// stored lists the files of a study's store.
+func stored(t *testing.T, dir string) (out []string) {
+	t.Helper()
+	err := filepath.WalkDir(filepath.Join(dir, ".batten"), func(p string, d fs.DirEntry, err error) error {
+		if err == nil && !d.IsDir() && d.Name() != "lock" {
+			out = append(out, p)
+		}
+		return err
+	})
+	if err != nil {
+		t.Fatal(err)
+	}
+	return out
+}
+
+// TestFlippedBits: a bit flipped in any file of the store, in a record or in an
+// output is mended by the next run, which ends with the same bytes.
+func TestFlippedBits(t *testing.T) {
+	dir := slowStudy(t)
+	if out, status := ran("run", dir, "-q"); status != Done {
+		t.Fatal(out)
+	}
+	want := outputsOf(t, dir)
+	kinds := map[string]int{}
+	for k, p := range append(stored(t, dir), filepath.Join(dir, "out", "grid.csv"), filepath.Join(dir, "out", "evidence.csv")) {
+		kind := strings.Split(strings.TrimPrefix(filepath.ToSlash(p), filepath.ToSlash(dir)+"/"), "/")
+		if name := strings.Join(kind[:min(2, len(kind)-1)], "/"); kinds[name] > 12 {
+			continue // enough of this kind
+		} else {
+			kinds[name]++
+		}
+		b, err := os.ReadFile(p)
+		if err != nil || len(b) == 0 {
+			continue
+		}
+		b[(k*7919)%len(b)] ^= 1 << (k % 8)
+		if err := os.WriteFile(p, b, 0o666); err != nil {
+			t.Fatal(err)
+		}
+		if filepath.Base(p) == "format" {
+			continue // any other number is another store's
+		}
+		if out, status := ran("run", dir, "-q"); status != Done {
+			t.Fatalf("%s: exit status %d: %s", p, status, out)
+		}
+		if outputsOf(t, dir) != want {
+			t.Fatalf("%s: after a flipped bit the outputs differ", p)
+		}
+		if filepath.Base(filepath.Dir(p)) == "runs" {
+			if out, status := ran("why", dir, "c", "g=g03"); status != Done {
+				t.Errorf("why, after a damaged record: %s", out)
+			}
+		}
+	}
+	if len(kinds) < 4 {
+		t.Errorf("only %v were tried", kinds)
+	}
+}
+
+// TestNewerStore: a store of a newer version is left alone, and it is said what
+// to do.
+func TestNewerStore(t *testing.T) {
+	dir := slowStudy(t)
+	if out, status := ran("run", dir, "-q"); status != Done {
+		t.Fatal(out)
+	}
+	before := len(stored(t, dir))
+	if err := os.WriteFile(filepath.Join(dir, ".batten", "format"), []byte("99\n"), 0o666); err != nil {
+		t.Fatal(err)
+	}
+	out, status := ran("run", dir)
+	if status != Failed || !strings.Contains(out, "newer program") {
+		t.Errorf("exit status %d: %s", status, out)
+	}
+	if len(stored(t, dir)) != before {
+		t.Error("a newer store was touched")
+	}
+}
+
+// TestMovedStudy: a study that was moved to another folder reuses its store and
+// writes the same bytes; a lock file that a dead process left does not block.
+func TestMovedStudy(t *testing.T) {
+	dir := slowStudy(t)
+	if out, status := ran("run", dir, "-q"); status != Done {
+		t.Fatal(out)
+	}
+	want := outputsOf(t, dir)
+	other := filepath.Join(t.TempDir(), "elsewhere")
+	if err := os.Rename(dir, other); err != nil {
+		t.Skip(err)
+	}
+	if err := os.WriteFile(filepath.Join(other, ".batten", "lock"), []byte("12345\n"), 0o666); err != nil {
+		t.Fatal(err)
+	}
+	if err := os.RemoveAll(filepath.Join(other, "out")); err != nil {
+		t.Fatal(err)
+	}
+	out, status := ran("run", other, "--json")
+	if status != Done || !strings.Contains(out, `"computed": 0`) || !strings.Contains(out, `"reused": 60`) {
+		t.Errorf("exit status %d: %s", status, out)
+	}
+	if outputsOf(t, other) != want {
+		t.Error("in another folder the outputs differ")
+	}
+}
+
+// mount mounts a small file system, or skips the test where that is not allowed.
+func mount(t *testing.T, args ...string) {
+	t.Helper()
+	if runtime.GOOS != "linux" || os.Getuid() != 0 {
+		t.Skip("this needs a file system of its own: root on linux")
+	}
+	if out, err := exec.Command("mount", args...).CombinedOutput(); err != nil {
+		t.Skipf("cannot mount here: %v: %s", err, out)
+	}
+	at := args[len(args)-1]
+	t.Cleanup(func() { _ = exec.Command("umount", "-l", at).Run() })
+}
+
+// TestFullDisk: a full disk ends a run with a clear message, no output is half
+// written, and with room again the run ends as an undisturbed one.
+func TestFullDisk(t *testing.T) {
+	dir := slowStudy(t)
+	if out, status := ran("run", dir, "-q"); status != Done {
+		t.Fatal(out)
+	}
+	want := outputsOf(t, dir)
+	small := t.TempDir()
+	mount(t, "-t", "tmpfs", "-o", "size=1m", "tmpfs", small)
+	for _, name := range []string{"study.hcl", "d.csv"} {
+		b, err := os.ReadFile(filepath.Join(dir, name))
+		if err != nil {
+			t.Fatal(err)
+		}
+		if err := os.WriteFile(filepath.Join(small, name), b, 0o666); err != nil {
+			t.Fatal(err)
+		}
+	}
+	full := 0
+	for _, mb := range []string{"200k", "400k", "800k", "1200k"} {
+		if out, err := exec.Command("mount", "-o", "remount,size="+mb, small).CombinedOutput(); err != nil {
+			t.Skipf("cannot change the size: %s", out)
+		}
+		out, status := ran("run", small, "-q")
+		if status == Done {
+			break
+		}
+		full++
+		if status != Failed || !strings.Contains(out, "no space left") || strings.Contains(out, "panic") {
+			t.Errorf("%s: exit status %d: %s", mb, status, out)
+		}
+		for _, f := range []string{"grid.csv", "evidence.csv"} {
+			if b, err := os.ReadFile(filepath.Join(small, "out", f)); err == nil && !strings.Contains(want, string(b)) {
+				t.Errorf("%s: %s is half written", mb, f)
+			}
+		}
+	}
+	if full == 0 {
+		t.Error("the disk was never full: this test looked at nothing")
+	}
+	if out, err := exec.Command("mount", "-o", "remount,size=64m", small).CombinedOutput(); err != nil {
+		t.Fatalf("%v: %s", err, out)
+	}
+	if out, status := ran("run", small, "-q"); status != Done {
+		t.Fatalf("with room again: exit status %d: %s", status, out)
+	}
+	if outputsOf(t, small) != want {
+		t.Error("after a full disk the outputs differ")
+	}
+}
+
+// TestReadOnlyStudy: in a folder that cannot be written a run says so and does
+// nothing; why and read answer from the record all the same.
+func TestReadOnlyStudy(t *testing.T) {
+	dir := slowStudy(t)
+	if out, status := ran("run", dir, "-q"); status != Done {
+		t.Fatal(out)
+	}
+	want := outputsOf(t, dir)
+	at := t.TempDir()
+	mount(t, "--bind", dir, at)
+	if out, err := exec.Command("mount", "-o", "remount,ro,bind", at).CombinedOutput(); err != nil {
+		t.Skipf("cannot make it read-only: %s", out)
+	}
+	out, status := ran("run", at, "-q")
+	if status == Done || !strings.Contains(out, "read-only") || strings.Contains(out, "panic") {
+		t.Errorf("exit status %d: %s", status, out)
+	}
+	for _, args := range [][]string{{"why", at, "c", "g=g03"}, {"read", at, "c", "g=g03", "--at", "4"}, {"check", at}} {
+		if out, status := ran(args...); status != Done {
+			t.Errorf("%v: exit status %d: %s", args, status, out)
+		}
+	}
+	if outputsOf(t, dir) != want {
+		t.Error("the outputs changed")
+	}
+}
