@@ -178,6 +178,21 @@ func TestAcceptSome(t *testing.T) {
 			t.Errorf("%s: %v", m.Fit, m.What)
 		}
 	}
+	// why says by which acceptance a fit stands
+	last, err := Reopen(r.Study, "")
+	if err != nil {
+		t.Fatal(err)
+	}
+	for g, want := range map[string][2]string{
+		"g01": {"accepted 20", ": looked at"},
+		"g02": {"accepted 20", "A. Tester left it as it was"},
+		"g03": {"accepted in part 20", ": looked at"},
+	} {
+		l := fitLine(last.state, "c", "c[g="+g+"]")
+		if !strings.HasPrefix(l, want[0]) || !strings.HasSuffix(l, want[1]) {
+			t.Errorf("%s: %s", g, l)
+		}
+	}
 	// what moves only now is not pending
 	raise(t, dir, "g05")
 	if m := movesOf(execute(t, dir, 2)); len(m) != 4 || m["c[g=g05]"] == "" || strings.Contains(m["c[g=g05]"], "pending") {
@@ -246,6 +261,30 @@ func TestAcceptBesideRefused(t *testing.T) {
 	}
 	if _, err := os.Stat(filepath.Join(dir, "ledger")); err == nil {
 		t.Error("a refused acceptance made a ledger")
+	}
+	// a refusal that is not about one fit blocks all
+	guarded, _ := os.ReadFile(filepath.Join(dir, "study.hcl"))
+	put(t, dir, "study.hcl", string(guarded)+`guard "all there" {
+  on        = d
+  require   = rows_read > 1000000
+  otherwise = refuse
+}
+`)
+	if s, err = spec.Load(dir); err != nil {
+		t.Fatal(err)
+	}
+	if _, err := Execute(context.Background(), s, Options{}); !errors.As(err, &refused) || len(refused.Refused) != 2 {
+		t.Fatal(err)
+	}
+	if _, err := acceptOnly(t, dir, "c[g=g00]"); !errors.As(err, &refused) || !strings.Contains(err.Error(), "all there") || strings.Contains(err.Error(), "g02") {
+		t.Errorf("%v", err)
+	}
+	put(t, dir, "study.hcl", string(guarded))
+	if s, err = spec.Load(dir); err != nil {
+		t.Fatal(err)
+	}
+	if _, err := Execute(context.Background(), s, Options{}); !errors.As(err, &refused) {
+		t.Fatal(err)
 	}
 	if a := mustAccept(t, dir, "c[g=g00]", "c[g=g03]"); a.Fits != 2 || !slices.Equal(a.Pending, []string{"c[g=g01]"}) {
 		t.Errorf("%+v", a)

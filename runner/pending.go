@@ -1,6 +1,7 @@
 package runner
 
 import (
+	"fmt"
 	"math"
 	"slices"
 	"strconv"
@@ -20,6 +21,30 @@ func pendingFits(s *ledger.State) map[string]bool {
 		}
 	}
 	return out
+}
+
+// acceptedLine says in one line who accepted, when and why.
+func acceptedLine(a *ledger.Acceptance) string {
+	how := "accepted"
+	if len(a.Only) > 0 {
+		how = "accepted in part"
+	}
+	return fmt.Sprintf("%s %s by %s: %s", how, day(a), a.Who, a.Why)
+}
+
+func day(a *ledger.Acceptance) string { return a.When[:min(10, len(a.When))] }
+
+// fitLine says of one fit on record who accepted it, and whether it is pending.
+func fitLine(s *ledger.State, curve, fit string) string {
+	a, last := s.Took(curve, fit), s.Last()
+	if a == nil {
+		a = last
+	}
+	line := acceptedLine(a)
+	if pendingFits(s)[fit] {
+		line += fmt.Sprintf("; pending: the acceptance of %s by %s left it as it was", day(last), last.Who)
+	}
+	return line
 }
 
 // markPending marks the fits that differ because they were left out.

@@ -304,11 +304,7 @@ func (r *Run) Ledger() string {
 	if a == nil {
 		return ""
 	}
-	how := "accepted"
-	if len(a.Only) > 0 {
-		how = "accepted in part"
-	}
-	return fmt.Sprintf("%s %s by %s: %s", how, a.When[:min(10, len(a.When))], a.Who, a.Why)
+	return acceptedLine(a)
 }
 
 // Check reads the heads of a study's inputs and looks at its outputs' places;

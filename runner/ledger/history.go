@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"encoding/json"
 	"fmt"
+	"slices"
 
 	"batten/runner/table"
 )
@@ -52,6 +53,18 @@ func (s *State) Append(a Acceptance) error {
 		a.Previous = d
 	}
 	s.Accepted = append(s.Accepted, a)
+	return nil
+}
+
+// Took returns the newest acceptance that took a fit of a curve; nil where
+// none is known.
+func (s *State) Took(curve, fit string) *Acceptance {
+	for i := len(s.Accepted) - 1; i >= 0; i-- {
+		a := &s.Accepted[i]
+		if len(a.Only) == 0 || slices.Contains(a.Took, fit) || slices.Contains(a.Took, curve) {
+			return a
+		}
+	}
 	return nil
 }
 

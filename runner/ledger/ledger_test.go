@@ -367,3 +367,31 @@ func TestManifest(t *testing.T) {
 		t.Error("the caller's order was changed")
 	}
 }
+
+// FuzzReadCurve: whatever a curve's file holds, it is read or refused, and what
+// is read can be written.
+func FuzzReadCurve(f *testing.F) {
+	b, err := (&Accepted{By: []string{"g"}, Entries: []Entry{plainEntry("a", 3), plainEntry("b", 4)}}).Encode()
+	if err != nil {
+		f.Fatal(err)
+	}
+	f.Add(b)
+	f.Add([]byte("check\n"))
+	f.Add([]byte(strings.Join(front, ",") + ",from,to,curve,half_width,key\n"))
+	dir := f.TempDir()
+	f.Fuzz(func(t *testing.T, b []byte) {
+		if err := os.WriteFile(filepath.Join(dir, "c.csv"), b, 0o666); err != nil {
+			t.Fatal(err)
+		}
+		a, err := ReadCurve(dir, "c")
+		if err != nil {
+			return
+		}
+		if _, err := a.Encode(); err != nil {
+			t.Error(err)
+		}
+		if _, err := (&Audit{}).curve(dir, CurveHeader{Name: "c"}); err != nil {
+			t.Error(err)
+		}
+	})
+}
