@@ -180,7 +180,7 @@ func (r *Run) writeReport(ctx context.Context, st *store.Store, rep *spec.Report
 	k.add("dated", r.Record.Dated)
 	k.add("ledger", r.Record.Ledger)
 	for _, m := range r.Record.Moved {
-		k.add("moved", m.Fit, strings.Join(m.What, ","), val(m.Shift), val(m.At), val(m.OldEDF), val(m.NewEDF))
+		k.add("moved", m.Fit, strings.Join(m.words(), ","), val(m.Shift), val(m.At), val(m.OldEDF), val(m.NewEDF))
 	}
 	var doc *reports.Document // made once, and only if some file needs it
 	document := func() (*reports.Document, error) {

@@ -288,15 +288,13 @@ func (r *Run) findMoved(ctx context.Context) error {
 		if r.Study.CurveByName(h.Name) != nil {
 			continue
 		}
-		old, err := ledger.ReadCurve(ledgerDir(r.Study), h.Name)
-		if err != nil || old == nil {
+		m, err := movedAway(r.Study, h.Name)
+		if err != nil {
 			return err
 		}
-		for _, e := range old.Entries {
-			r.Record.Moved = append(r.Record.Moved,
-				Move{Fit: fitName(h.Name, label(old.By, e.Group)), What: []string{"gone"}, OldEDF: ptr(e.EDF)})
-		}
+		r.Record.Moved = append(r.Record.Moved, m...)
 	}
+	markPending(r.state, r.Record.Moved)
 	return nil
 }
 
@@ -306,7 +304,7 @@ func (r *Run) Ledger() string {
 	if a == nil {
 		return ""
 	}
-	return fmt.Sprintf("accepted %s by %s: %s", a.When[:min(10, len(a.When))], a.Who, a.Why)
+	return acceptedLine(a)
 }
 
 // Check reads the heads of a study's inputs and looks at its outputs' places;

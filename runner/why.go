@@ -245,6 +245,9 @@ func (r *Recorded) Why(ctx context.Context, curve string, match []Match) (*Answe
 		for k := range old.Entries {
 			if label(old.By, old.Entries[k].Group) == label(cf.by, f.Group) {
 				a.Accepted = &old.Entries[k]
+				if r.state != nil {
+					a.Ledger = fitLine(r.state, curve, fitName(curve, label(cf.by, f.Group)))
+				}
 			}
 		}
 	}
