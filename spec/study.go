@@ -253,12 +253,11 @@ const (
 
 // Export is a table written to a file.
 type Export struct {
-	Name  Name
-	Of    string // a curve; for grid also a contrast
-	What  string
-	File  string
-	// Schema asks for a Table Schema beside the file.
-	Schema bool
+	Name   Name
+	Of     string // a curve; for grid also a contrast
+	What   string
+	File   string
+	Schema bool // a Table Schema beside the file
 	Range  hcl.Range
 }
 
