@@ -11,6 +11,7 @@ import (
 	"strconv"
 	"strings"
 
+	"batten/runner/provenance"
 	"batten/runner/store"
 )
 
@@ -38,6 +39,10 @@ type Record struct {
 	Guards   []GuardResult `json:"guards,omitempty"` // those on contrasts, inputs and the study
 	Outputs  []Output      `json:"outputs"`
 	Refused  []string      `json:"refused,omitempty"`
+
+	Who     string              `json:"who,omitempty"`     // who ran it, where known
+	Against []FileRecord        `json:"against,omitempty"` // the ledger's files that it was compared with
+	Modules []provenance.Module `json:"modules,omitempty"` // that the program was built of
 }
 
 // SpecFile is the spec as it was run.

@@ -115,12 +115,12 @@ func Execute(ctx context.Context, s *spec.Study, opt Options) (*Run, error) {
 	}
 	r.Record = r.record(started)
 	if then := opt.again; then != nil {
-		r.Record.Moved, r.Record.Ledger, r.Record.Dated = then.Moved, then.Ledger, then.Dated
+		r.Record.Moved, r.Record.Ledger, r.Record.Dated, r.Record.Against = then.Moved, then.Ledger, then.Dated, then.Against
 	} else {
 		if r.state, err = ledger.ReadState(ledgerDir(s)); err != nil {
 			return nil, err
 		}
-		r.Record.Ledger, r.Record.Dated = r.Ledger(), dated()
+		r.Record.Ledger, r.Record.Dated, r.Record.Against = r.Ledger(), dated(), ledgerFiles(s, r.state)
 		if err := r.findMoved(ctx); err != nil {
 			return nil, err
 		}
@@ -190,6 +190,7 @@ func (r *Run) record(started time.Time) *Record {
 		Started: stamp(started), Program: r.opt.Program, Go: runtime.Version(), Methods: Methods(),
 		Spec: SpecFile{Path: filepath.Base(s.File), SHA256: s.Hash(), Text: string(s.Text)}, Seed: s.Seed,
 		Moved: []Move{}, Outputs: []Output{},
+		Who: operator(s.Dir), Modules: modules(),
 	}
 	for _, in := range s.Inputs {
 		ir := InputRecord{Name: in.Name.Text}

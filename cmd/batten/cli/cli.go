@@ -149,7 +149,7 @@ STUDY is a spec file, or a folder that holds study.hcl.`,
 	})
 	root.PersistentFlags().BoolVar(&e.json, "json", false, "print the answer as JSON")
 	root.PersistentFlags().BoolVarP(&e.quiet, "quiet", "q", false, "no progress, no table: only what went wrong")
-	root.AddCommand(e.check(), e.run(), e.why(), e.read(), e.accept(), e.graph(), e.compare(), e.replay(), e.sweep())
+	root.AddCommand(e.check(), e.run(), e.why(), e.read(), e.accept(), e.graph(), e.compare(), e.replay(), e.sweep(), e.record())
 	root.CompletionOptions.HiddenDefaultCmd = false
 	for _, c := range root.Commands() {
 		wrapArgs(c)
