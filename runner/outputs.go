@@ -43,6 +43,36 @@ func checkOutputs(s *spec.Study) error {
 	return nil
 }
 
+// clearOutputs removes what a killed run left beside the outputs. The caller
+// holds the study's lock and has looked at the outputs' places.
+func clearOutputs(s *spec.Study) {
+	var files, folders []string
+	for _, e := range s.Exports {
+		files = append(files, filepath.Join(s.Dir, filepath.FromSlash(e.File)))
+		if f := e.SchemaFile(); f != "" {
+			files = append(files, filepath.Join(s.Dir, filepath.FromSlash(f)))
+		}
+	}
+	for _, rep := range s.Reports {
+		for _, f := range rep.Files {
+			files = append(files, filepath.Join(s.Dir, filepath.FromSlash(f)))
+			if !strings.HasSuffix(f, ".md") {
+				continue
+			}
+			folder := path.Join(path.Dir(f), figuresFolder(f))
+			if _, err := store.OutputPath(s.Dir, path.Join(folder, "figure")); err == nil { // no link leads out
+				folders = append(folders, filepath.Join(s.Dir, filepath.FromSlash(folder)))
+			}
+		}
+	}
+	store.ClearUnfinished(files, folders)
+}
+
+// figuresFolder is the folder, beside a Markdown report, of its figures.
+func figuresFolder(file string) string {
+	return strings.TrimSuffix(path.Base(file), ".md") + "_figures"
+}
+
 func outputError(s *spec.Study, line, col int, err error) error {
 	return usagef("%s: %v", at(s, line, col), err)
 }
@@ -237,7 +267,7 @@ func (r *Run) writeMarkdown(st *store.Store, file, key string, document func() (
 	if err != nil {
 		return err
 	}
-	main, figures := reports.Markdown(d, strings.TrimSuffix(path.Base(file), ".md")+"_figures")
+	main, figures := reports.Markdown(d, figuresFolder(file))
 	names := make([]string, 0, len(figures))
 	for n := range figures {
 		names = append(names, n)

@@ -1,6 +1,7 @@
 package runner
 
 import (
+	"bytes"
 	"encoding/json"
 	"errors"
 	"fmt"
@@ -43,6 +44,17 @@ type Record struct {
 	Who     string              `json:"who,omitempty"`     // who ran it, where known
 	Against []FileRecord        `json:"against,omitempty"` // the ledger's files that it was compared with
 	Modules []provenance.Module `json:"modules,omitempty"` // that the program was built of
+}
+
+// checkLine begins the last line of a record, which holds the digest of all
+// before it. Records of earlier versions have none.
+const checkLine = ",\n \"check\": \""
+
+// AlteredRecordError says that a record is not what was written.
+type AlteredRecordError struct{ Run, File string }
+
+func (e *AlteredRecordError) Error() string {
+	return fmt.Sprintf("the record of run %s has been altered since it was written, or damaged (%s); expected the bytes that its last line gives the digest of. Bring the file back from a backup, or run the study again", e.Run, filepath.ToSlash(e.File))
 }
 
 // SpecFile is the spec as it was run.
@@ -161,13 +173,17 @@ func lastRecord(dir string) (*Record, error) {
 }
 
 func readRecord(dir, id string) (*Record, error) {
-	b, err := os.ReadFile(filepath.Join(runsDir(dir), id+".json"))
+	file := filepath.Join(runsDir(dir), id+".json")
+	b, err := os.ReadFile(file)
 	if err != nil {
 		return nil, err
 	}
+	if i := bytes.LastIndex(b, []byte(checkLine)); i >= 0 && !bytes.Equal(b, checked(b[:i:i])) {
+		return nil, &AlteredRecordError{id, file}
+	}
 	var r Record
 	if err := json.Unmarshal(b, &r); err != nil {
-		return nil, fmt.Errorf("record of run %s: %w", id, err)
+		return nil, &AlteredRecordError{id, file}
 	}
 	if r.Format > recordFormat {
 		return nil, fmt.Errorf("record of run %s is of format %d, this program reads up to %d", id, r.Format, recordFormat)
@@ -193,5 +209,10 @@ func writeRecord(dir string, r *Record) error {
 	if err != nil {
 		return err
 	}
-	return store.WriteFile(filepath.Join(runsDir(dir), r.Run+".json"), append(b, '\n'))
+	return store.WriteFile(filepath.Join(runsDir(dir), r.Run+".json"), checked(bytes.TrimSuffix(b, []byte("\n}"))))
+}
+
+// checked ends a record with the digest of its bytes.
+func checked(b []byte) []byte {
+	return fmt.Appendf(b, "%s%s\"\n}\n", checkLine, digest(b))
 }

@@ -2,11 +2,15 @@ package runner
 
 import (
 	"bufio"
+	"bytes"
 	"context"
+	"encoding/json"
+	"errors"
 	"fmt"
 	"io/fs"
 	"os"
 	"path/filepath"
+	"runtime"
 	"strings"
 
 	"batten/spec"
@@ -22,16 +26,20 @@ type Replayed struct {
 	MethodsThen     []string
 	MethodsNow      []string
 	DifferentCurves []string // curves whose stored fits have another digest
+	DifferentGuards []string // curves of whose fits the guards say something else, and "the whole"
 }
 
 // Same tells whether nothing differs.
-func (r *Replayed) Same() bool { return len(r.Different) == 0 && len(r.DifferentCurves) == 0 }
+func (r *Replayed) Same() bool {
+	return len(r.Different)+len(r.DifferentCurves)+len(r.DifferentGuards) == 0
+}
 
 // FoundInput is a recorded input file.
 type FoundInput struct {
 	Path, SHA256 string
 	Found        string // where it lies now: "" where it was not found
 	Altered      bool   // a file stands at its path, with another digest
+	Elsewhere    bool   // it was found, but not at its path
 }
 
 // Difference is one output that came out otherwise.
@@ -47,7 +55,8 @@ type Difference struct {
 // MissingInputsError says which recorded inputs cannot be found.
 type MissingInputsError struct {
 	Run   string
-	Files []FoundInput
+	Files []FoundInput // those that were not found
+	All   []FoundInput // every recorded one
 }
 
 func (e *MissingInputsError) Error() string {
@@ -72,10 +81,10 @@ func Replay(ctx context.Context, s *spec.Study, run, folder string, opt Options)
 	if err != nil {
 		return nil, err
 	}
-	if len(rec.Refused) > 0 {
-		return nil, usagef("run %s was refused by a guard and wrote nothing that could be compared", rec.Run)
+	if ids, err := listRuns(s.Dir); err == nil && run == "" && ids[len(ids)-1] != rec.Run {
+		opt.Progress.Note(fmt.Sprintf("the record of run %s cannot be read; run %s before it is replayed", ids[len(ids)-1], rec.Run))
 	}
-	out := &Replayed{Run: rec.Run, Recorded: rec.Program + ", " + rec.Go, Now: opt.Program, MethodsThen: rec.Methods, MethodsNow: Methods()}
+	out := &Replayed{Run: rec.Run, Recorded: rec.Program + ", " + rec.Go, Now: opt.Program + ", " + runtime.Version(), MethodsThen: rec.Methods, MethodsNow: Methods()}
 	dir, err := os.MkdirTemp("", "batten-replay-")
 	if err != nil {
 		return nil, fmt.Errorf("a replay needs a temporary folder: %w", err)
@@ -90,14 +99,11 @@ func Replay(ctx context.Context, s *spec.Study, run, folder string, opt Options)
 	}
 	opt.again = rec
 	r, err := Execute(ctx, again, opt)
-	if err != nil {
+	var refused *RefusedError // again, or for the first time: the fits are there to compare
+	if err != nil && !errors.As(err, &refused) {
 		return nil, fmt.Errorf("run %s could not be computed again: %w", rec.Run, err)
 	}
-	for i, c := range rec.Curves {
-		if i >= len(r.Record.Curves) || r.Record.Curves[i].Object != c.Object {
-			out.DifferentCurves = append(out.DifferentCurves, c.Name)
-		}
-	}
+	out.compareFits(rec, r.Record)
 	made := map[string]string{}
 	for _, o := range r.Record.Outputs {
 		made[o.Path] = o.SHA256
@@ -112,6 +118,31 @@ func Replay(ctx context.Context, s *spec.Study, run, folder string, opt Options)
 		out.Different = append(out.Different, d)
 	}
 	return out, nil
+}
+
+// compareFits compares the digests of the fits, and what the guards said.
+func (r *Replayed) compareFits(then, now *Record) {
+	for i, c := range then.Curves {
+		switch {
+		case i >= len(now.Curves) || now.Curves[i].Object != c.Object:
+			r.DifferentCurves = append(r.DifferentCurves, c.Name)
+		case !sameWords(now.Curves[i].Verdicts, c.Verdicts):
+			r.DifferentGuards = append(r.DifferentGuards, c.Name)
+		}
+	}
+	if !sameWords(then.Guards, now.Guards) || !sameWords(then.Refused, now.Refused) && len(r.DifferentGuards) == 0 {
+		r.DifferentGuards = append(r.DifferentGuards, "the whole")
+	}
+}
+
+// sameWords compares two parts of a record as they are written.
+func sameWords[T any](a, b []T) bool {
+	if len(a) == 0 || len(b) == 0 {
+		return len(a) == len(b)
+	}
+	x, errA := json.Marshal(a)
+	y, errB := json.Marshal(b)
+	return errA == nil && errB == nil && bytes.Equal(x, y)
 }
 
 // findInputs finds every recorded input by its digest: at its own path first,
@@ -179,6 +210,7 @@ func findInputs(s, again *spec.Study, rec *Record, folder string, out *Replayed)
 					}
 				}
 				found.Found = byDigest[f.SHA256]
+				found.Elsewhere = found.Found != ""
 			}
 			if found.Found == "" {
 				missing = append(missing, found)
@@ -189,7 +221,7 @@ func findInputs(s, again *spec.Study, rec *Record, folder string, out *Replayed)
 		}
 	}
 	if len(missing) > 0 {
-		return &MissingInputsError{rec.Run, missing}
+		return &MissingInputsError{rec.Run, missing, out.Inputs}
 	}
 	return nil
 }

@@ -87,6 +87,7 @@ func Execute(ctx context.Context, s *spec.Study, opt Options) (*Run, error) {
 	if err := checkOutputs(s); err != nil {
 		return nil, err
 	}
+	clearOutputs(s)
 	r := &Run{Study: s, opt: opt, curves: map[string]*curveFits{}}
 	if r.files, err = hashInputs(ctx, s); err != nil {
 		return nil, err

@@ -2,6 +2,8 @@ package runner
 
 import (
 	"context"
+	"errors"
+	"io/fs"
 	"os"
 	"path/filepath"
 	"strings"
@@ -16,20 +18,27 @@ import (
 // Swept says what a sweep removed, or would remove.
 type Swept struct {
 	store.Swept
-	Runs     int      // records removed
-	KeptRuns []string // those that stay, oldest first
-	Dry      bool
+	Runs       int      // records removed
+	KeptRuns   []string // those that stay, oldest first
+	Unreadable []string // of these, the ones whose records cannot be read
+	Dry        bool
 }
 
 // Sweep drops the records of all but the last keep runs and of those that were
 // accepted, and every stored object that no kept run names. What it drops can be
-// computed again; what the ledger or a kept run names stays.
+// computed again; what the ledger or a kept run names stays. Where a kept record
+// cannot be read nobody knows what it names, and every object stays.
 func Sweep(ctx context.Context, s *spec.Study, keep int, dry bool, opt Options) (*Swept, error) {
 	opt.fill()
 	if keep < 1 {
 		return nil, usagef("--keep %d: expected 1 or more", keep)
 	}
-	st, err := store.Open(filepath.Join(s.Dir, ".batten"))
+	out := &Swept{Dry: dry, KeptRuns: []string{}}
+	dir := filepath.Join(s.Dir, ".batten")
+	if _, err := os.Stat(dir); errors.Is(err, fs.ErrNotExist) {
+		return out, nil // never run: a sweep makes no store
+	}
+	st, err := store.Open(dir)
 	if err != nil {
 		return nil, err
 	}
@@ -55,58 +64,95 @@ func Sweep(ctx context.Context, s *spec.Study, keep int, dry bool, opt Options) 
 			kept[a.Run] = true
 		}
 	}
-	out := &Swept{Dry: dry}
-	objects, outputs := map[string]bool{}, map[string]bool{}
+	// Records go before what they name: a sweep that is killed leaves objects
+	// too many, for the next one, and no record without its objects.
 	for _, id := range ids {
-		if !kept[id] {
+		if kept[id] {
+			out.KeptRuns = append(out.KeptRuns, id)
 			continue
 		}
-		out.KeptRuns = append(out.KeptRuns, id)
+		n, err := dropRecord(s.Dir, id, dry)
+		if err != nil {
+			return nil, err
+		}
+		out.Runs++
+		out.Bytes += n
+	}
+	live := &named{store: st, objects: map[string]bool{}, results: map[string]bool{}}
+	for _, id := range out.KeptRuns {
 		rec, err := readRecord(s.Dir, id)
 		if err != nil {
-			continue // a record that cannot be read names nothing
+			out.Unreadable = append(out.Unreadable, id)
+			continue
 		}
-		for _, c := range rec.Curves {
-			objects[c.Object] = true
-			var m manifest
-			if b, ok := st.Object(c.Object); ok && cbor.Unmarshal(b, &m) == nil {
-				for _, p := range m.Parts {
-					objects[p] = true
+		live.add(rec)
+	}
+	live.all = len(out.Unreadable) > 0
+	bytes := out.Bytes
+	if out.Swept, err = st.Sweep(live.holds, dry); err != nil {
+		return nil, err
+	}
+	out.Bytes += bytes
+	return out, nil
+}
+
+// dropRecord removes a run's record and returns its size.
+func dropRecord(dir, id string, dry bool) (int64, error) {
+	path := filepath.Join(runsDir(dir), id+".json")
+	fi, err := os.Stat(path)
+	if err == nil && !dry {
+		err = os.Remove(path)
+	}
+	if err != nil {
+		return 0, &store.UnwritableError{Dir: runsDir(dir), Err: err}
+	}
+	return fi.Size(), nil
+}
+
+// named is what the kept runs name.
+type named struct {
+	store   *store.Store
+	all     bool
+	objects map[string]bool // digests
+	results map[string]bool // lines of keys
+}
+
+func (n *named) add(rec *Record) {
+	for _, c := range rec.Curves {
+		n.objects[c.Object] = true
+		var m manifest
+		if b, ok := n.store.Object(c.Object); ok && cbor.Unmarshal(b, &m) == nil {
+			for _, p := range m.Parts {
+				n.objects[p] = true
+			}
+		}
+	}
+	for _, o := range rec.Outputs { // kept as an object that holds its digest
+		n.objects[digest([]byte(o.SHA256))] = true
+	}
+	k := &key{}
+	k.add("results", rec.Results)
+	n.results[strings.TrimSuffix(k.String(), "\n")] = true
+}
+
+// holds tells whether an object stays, by its digest or by a key that leads to
+// it: the list of a report's figures is of a run's results, and what groups
+// share is small and of every run.
+func (n *named) holds(digest string, keys []string) bool {
+	if n.all || n.objects[digest] {
+		return true
+	}
+	for _, k := range keys {
+		if strings.HasPrefix(k, "shared ") {
+			return true
+		}
+		if strings.HasPrefix(k, "report ") {
+			for line := range strings.Lines(k) {
+				if n.results[strings.TrimSuffix(line, "\n")] {
+					return true
 				}
 			}
 		}
-		for _, o := range rec.Outputs {
-			outputs[digest([]byte(o.SHA256))] = true
-		}
 	}
-	out.Swept, err = st.Sweep(func(d string, keys []string) bool {
-		if objects[d] || outputs[d] {
-			return true
-		}
-		for _, k := range keys { // what groups share is small, and of every run
-			if strings.HasPrefix(k, "shared ") {
-				return true
-			}
-		}
-		return false
-	}, dry)
-	if err != nil {
-		return nil, err
-	}
-	for _, id := range ids {
-		if kept[id] {
-			continue
-		}
-		out.Runs++
-		path := filepath.Join(runsDir(s.Dir), id+".json")
-		if fi, err := os.Stat(path); err == nil {
-			out.Bytes += fi.Size()
-		}
-		if !dry {
-			if err := os.Remove(path); err != nil {
-				return nil, &store.UnwritableError{Dir: runsDir(s.Dir), Err: err}
-			}
-		}
-	}
-	return out, nil
+	return false
 }

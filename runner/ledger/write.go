@@ -165,6 +165,11 @@ func Write(dir string, c Change) error {
 	if _, err := os.Lstat(attributes); errors.Is(err, fs.ErrNotExist) {
 		files = append([]file{{attributes, []byte("* -text\n")}}, files...)
 	}
+	var paths []string
+	for _, f := range files {
+		paths = append(paths, f.path)
+	}
+	store.ClearUnfinished(paths, nil)
 	for _, f := range files {
 		if err := store.WriteFile(f.path, f.bytes); err != nil {
 			return err

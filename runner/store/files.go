@@ -7,6 +7,7 @@ import (
 	"os"
 	"path/filepath"
 	"runtime"
+	"slices"
 	"strings"
 )
 
@@ -77,13 +78,46 @@ func (e *WriteError) Error() string {
 }
 func (e *WriteError) Unwrap() error { return e.Err }
 
+// tempPrefix begins the names under which a file is written before it gets its
+// own. It tells whose they are, so that what a killed run left can be removed
+// without touching what somebody else is writing beside it.
+func tempPrefix(path string) string { return ".tmp-" + sum([]byte(filepath.Base(path)))[:16] + "-" }
+
+// ClearUnfinished removes what killed writers of these files left beside them,
+// and what any left in folders that are all the study's own. The caller makes
+// sure that nobody is writing them. What cannot be removed stays: it is in
+// nobody's way.
+func ClearUnfinished(files, folders []string) {
+	of := map[string][]string{} // the beginnings of their names, by folder
+	for _, f := range files {
+		of[filepath.Dir(f)] = append(of[filepath.Dir(f)], tempPrefix(f))
+	}
+	for _, d := range folders {
+		of[d] = append(of[d], ".tmp-")
+	}
+	for dir, prefixes := range of {
+		es, err := os.ReadDir(dir)
+		if err != nil {
+			continue
+		}
+		for _, e := range es {
+			if !e.Type().IsRegular() || !strings.HasPrefix(e.Name(), ".tmp-") {
+				continue
+			}
+			if slices.ContainsFunc(prefixes, func(p string) bool { return strings.HasPrefix(e.Name(), p) }) {
+				_ = os.Remove(filepath.Join(dir, e.Name()))
+			}
+		}
+	}
+}
+
 // Create begins a file, making its folder where needed.
 func Create(path string) (*AtomicFile, error) {
 	dir := filepath.Dir(path)
 	if err := os.MkdirAll(dir, 0o777); err != nil {
 		return nil, &WriteError{path, err}
 	}
-	f, err := os.CreateTemp(dir, ".tmp-*")
+	f, err := os.CreateTemp(dir, tempPrefix(path)+"*")
 	if err != nil {
 		return nil, &WriteError{path, err}
 	}

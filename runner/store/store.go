@@ -140,7 +140,7 @@ func (s *Store) prepare() error {
 // clean removes temporary files that a killed process left. The caller holds
 // the lock, so nobody is writing them.
 func (s *Store) clean() {
-	for _, pattern := range []string{"tmp-*", "objects/*/tmp-*", "keys/*/tmp-*", "slots/tmp-*", "runs/tmp-*"} {
+	for _, pattern := range []string{"tmp-*", "objects/*/tmp-*", "keys/*/tmp-*", "slots/tmp-*", "runs/.tmp-*"} {
 		found, _ := filepath.Glob(filepath.Join(s.dir, filepath.FromSlash(pattern)))
 		for _, f := range found {
 			_ = os.Remove(f)

@@ -1,6 +1,7 @@
 package cli
 
 import (
+	"errors"
 	"fmt"
 
 	"github.com/spf13/cobra"
@@ -36,6 +37,10 @@ anything differs, 3 when an input is missing or altered.`,
 				run = args[1]
 			}
 			r, err := runner.Replay(c.Context(), s, run, folder, runner.Options{Workers: workers, Progress: e.progress(), Program: version()})
+			var missing *runner.MissingInputsError
+			if errors.As(err, &missing) && e.json {
+				return errors.Join(e.printJSON(map[string]any{"run": missing.Run, "same": false, "inputs": inputsJSON(missing.All)}), err)
+			}
 			if err != nil {
 				return err
 			}
@@ -53,6 +58,21 @@ anything differs, 3 when an input is missing or altered.`,
 	return c
 }
 
+type inputJSON struct {
+	Path    string `json:"path"`
+	SHA256  string `json:"sha256"`
+	Found   string `json:"found"`   // "" where it was not
+	Altered bool   `json:"altered"` // another file stands at its path
+}
+
+func inputsJSON(files []runner.FoundInput) []inputJSON {
+	out := []inputJSON{}
+	for _, f := range files {
+		out = append(out, inputJSON{f.Path, f.SHA256, f.Found, f.Altered})
+	}
+	return out
+}
+
 func (e *env) printReplay(r *runner.Replayed) error {
 	if e.json {
 		type difference struct {
@@ -65,20 +85,13 @@ func (e *env) printReplay(r *runner.Replayed) error {
 			Is       string `json:"is,omitempty"`
 			Note     string `json:"note,omitempty"`
 		}
-		type input struct {
-			Path   string `json:"path"`
-			SHA256 string `json:"sha256"`
-			Found  string `json:"found"`
-		}
-		diffs, inputs := []difference{}, []input{}
+		diffs := []difference{}
 		for _, d := range r.Different {
 			diffs = append(diffs, difference(d))
 		}
-		for _, f := range r.Inputs {
-			inputs = append(inputs, input{f.Path, f.SHA256, f.Found})
-		}
-		return e.printJSON(map[string]any{"run": r.Run, "same": r.Same(), "recorded_by": r.Recorded, "replayed_by": r.Now, "inputs": inputs,
-			"outputs": r.Outputs, "different": diffs, "different_fits": r.DifferentCurves})
+		return e.printJSON(map[string]any{"run": r.Run, "same": r.Same(), "recorded_by": r.Recorded, "replayed_by": r.Now, "inputs": inputsJSON(r.Inputs),
+			"methods_recorded": r.MethodsThen, "methods_now": r.MethodsNow, "outputs": r.Outputs, "different": diffs,
+			"different_fits": append([]string{}, r.DifferentCurves...), "different_guards": append([]string{}, r.DifferentGuards...)})
 	}
 	if e.quiet {
 		return nil
@@ -88,10 +101,17 @@ func (e *env) printReplay(r *runner.Replayed) error {
 	say("Run %s, recorded by %s; computed again by %s.", r.Run, r.Recorded, r.Now)
 	for _, f := range r.Inputs {
 		where := ""
-		if f.Altered {
+		switch {
+		case f.Altered:
 			where = ", altered since; the recorded one was found at " + f.Found
+		case f.Elsewhere:
+			where = ", no longer there; found at " + f.Found
 		}
 		say("  %s (SHA-256 %.16s...)%s", f.Path, f.SHA256, where)
+	}
+	if r.Same() && r.Outputs == 0 {
+		say("The fits came out the same, and so did what the guards say of them; the run wrote no outputs.")
+		return nil
 	}
 	if r.Same() {
 		say("All %s came out the same, byte for byte, and so did the fits.", count(r.Outputs, "output", "outputs"))
@@ -99,6 +119,13 @@ func (e *env) printReplay(r *runner.Replayed) error {
 	}
 	for _, c := range r.DifferentCurves {
 		say("The fits of curve %q differ.", c)
+	}
+	for _, g := range r.DifferentGuards {
+		if g == "the whole" {
+			say("What the guards say of the study differs.")
+		} else {
+			say("What the guards say of the fits of curve %q differs.", g)
+		}
 	}
 	for _, d := range r.Different {
 		switch {

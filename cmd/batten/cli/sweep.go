@@ -2,6 +2,7 @@ package cli
 
 import (
 	"fmt"
+	"strings"
 
 	"github.com/spf13/cobra"
 
@@ -15,7 +16,8 @@ func (e *env) sweep() *cobra.Command {
 		Use:   "sweep STUDY",
 		Short: "Drop stored objects that no kept run names",
 		Long: `Sweep makes room under .batten: it keeps the last runs and every accepted one, with
-all that they name, and drops the rest. What it drops can be computed again.`,
+all that they name, and drops the rest. What it drops can be computed again. It
+waits for a run that is at work.`,
 		Example: `  batten sweep study.hcl --dry
   batten sweep study.hcl --keep 3`,
 		Args: cobra.ExactArgs(1),
@@ -30,7 +32,10 @@ all that they name, and drops the rest. What it drops can be computed again.`,
 			}
 			if e.json {
 				return e.printJSON(map[string]any{"dry": r.Dry, "objects": r.Objects, "keys": r.Keys, "slots": r.Slots, "runs": r.Runs,
-					"bytes": r.Bytes, "kept_objects": r.Kept, "kept_runs": r.KeptRuns})
+					"bytes": r.Bytes, "kept_objects": r.Kept, "kept_runs": r.KeptRuns, "unreadable_runs": append([]string{}, r.Unreadable...)})
+			}
+			if len(r.Unreadable) > 0 {
+				fmt.Fprintf(e.err, "batten: records that cannot be read: %s; nobody knows what they name, so no object was dropped.\n  Remove their files in .batten/runs to let the objects go.\n", strings.Join(r.Unreadable, ", "))
 			}
 			if e.quiet {
 				return nil
