@@ -118,6 +118,64 @@ func TestReplay(t *testing.T) {
 	}
 }
 
+// TestReplayRefused: a run that a guard refused made no outputs, but its fits and
+// what the guard said can be proved; a record that vouches for other words is
+// found out.
+func TestReplayRefused(t *testing.T) {
+	dir := write(t, "gcv", map[string][]string{"d.csv": rowsOf(3, 24)})
+	text := strings.Replace(strings.Replace(studyText, "RULE", "gcv", 1), "edf < 40\n  otherwise = warn", "edf < 3.5\n  otherwise = refuse", 1)
+	put(t, dir, "study.hcl", text)
+	s, err := spec.Load(dir)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var refused *RefusedError
+	r, err := Execute(context.Background(), s, Options{})
+	if !errors.As(err, &refused) {
+		t.Fatalf("nothing was refused: %v", err)
+	}
+	p, err := replay(t, dir, "", "")
+	if err != nil || !p.Same() || p.Outputs != 0 {
+		t.Errorf("%+v, %v", p, err)
+	}
+	rec := *r.Record
+	rec.Curves = append([]CurveRecord(nil), rec.Curves...)
+	rec.Curves[0].Verdicts = rec.Curves[0].Verdicts[1:]
+	b, err := json.Marshal(&rec)
+	if err != nil {
+		t.Fatal(err)
+	}
+	put(t, runsDir(dir), rec.Run+".json", string(b))
+	if p, err = replay(t, dir, "", ""); err != nil || p.Same() || len(p.DifferentGuards) != 1 || p.DifferentGuards[0] != "c" {
+		t.Errorf("%+v, %v", p, err)
+	}
+
+	// a damaged record: the one before it answers, and it is said
+	put(t, dir, "study.hcl", strings.Replace(studyText, "RULE", "gcv", 1))
+	second := execute(t, dir, 2).Record.Run
+	execute(t, dir, 2)
+	ids, err := listRuns(dir)
+	if err != nil || len(ids) != 3 {
+		t.Fatal(ids, err)
+	}
+	put(t, runsDir(dir), ids[2]+".json", "{")
+	if s, err = spec.Load(dir); err != nil {
+		t.Fatal(err)
+	}
+	n := &notes{}
+	if p, err = Replay(context.Background(), s, "", "", Options{Progress: n}); err != nil || p.Run != second || !strings.Contains(strings.Join(n.said, "\n"), "cannot be read") {
+		t.Errorf("%+v, %v, said %q", p, err, n.said)
+	}
+}
+
+// notes keeps what is said of the progress.
+type notes struct {
+	quiet
+	said []string
+}
+
+func (n *notes) Note(text string) { n.said = append(n.said, text) }
+
 // TestClockRunsBackwards: records are ordered by their count, not by the clock.
 func TestClockRunsBackwards(t *testing.T) {
 	dir := write(t, "gcv", map[string][]string{"d.csv": rowsOf(2, 20)})

@@ -3,6 +3,8 @@ package runner
 import (
 	"context"
 	"fmt"
+	"os"
+	"path/filepath"
 	"strings"
 	"testing"
 
@@ -68,5 +70,59 @@ func TestSweep(t *testing.T) {
 	}
 	if _, err := Sweep(context.Background(), s, 0, false, Options{}); err == nil {
 		t.Error("keep 0 was accepted")
+	}
+}
+
+// TestSweepKeepsAll: of a study with one run nothing is dropped; where a kept
+// record cannot be read no object goes; a study that was never run gets no store.
+func TestSweepKeepsAll(t *testing.T) {
+	rows := rowsOf(3, 24)
+	dir := write(t, "gcv", map[string][]string{"d.csv": rows})
+	s, err := spec.Load(dir)
+	if err != nil {
+		t.Fatal(err)
+	}
+	sweep := func(keep int) *Swept {
+		t.Helper()
+		r, err := Sweep(context.Background(), s, keep, false, Options{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		return r
+	}
+	if r := sweep(1); r.Kept != 0 || r.Bytes != 0 {
+		t.Errorf("before any run: %+v", r)
+	}
+	if _, err := os.Stat(filepath.Join(dir, ".batten")); err == nil {
+		t.Error("a sweep made a store")
+	}
+	execute(t, dir, 2)
+	if r := sweep(1); r.Objects != 0 || r.Keys != 0 || r.Slots != 0 || r.Runs != 0 || r.Kept == 0 || r.Bytes != 0 {
+		t.Errorf("after one run: %+v", r)
+	}
+	put(t, dir, "d.csv", rowsText(rows[:40]))
+	execute(t, dir, 2)
+	put(t, dir, "d.csv", rowsText(rows[:50]))
+	execute(t, dir, 2)
+	ids, err := listRuns(dir)
+	if err != nil || len(ids) != 3 {
+		t.Fatal(ids, err)
+	}
+	b, err := os.ReadFile(filepath.Join(runsDir(dir), ids[1]+".json"))
+	if err != nil {
+		t.Fatal(err)
+	}
+	damaged := append([]byte(nil), b...)
+	damaged[len(b)/2] ^= 4
+	put(t, runsDir(dir), ids[1]+".json", string(damaged))
+	if r := sweep(2); r.Objects != 0 || r.Runs != 1 || fmt.Sprint(r.Unreadable) != fmt.Sprint(ids[1:2]) {
+		t.Errorf("with a damaged record: %+v", r)
+	}
+	put(t, runsDir(dir), ids[1]+".json", string(b))
+	if _, err := Compare(context.Background(), s, ids[1], ids[2], Options{}); err != nil {
+		t.Errorf("what a damaged record named was dropped: %v", err)
+	}
+	if r := sweep(2); r.Objects == 0 || len(r.Unreadable) != 0 {
+		t.Errorf("with the record brought back: %+v", r)
 	}
 }
