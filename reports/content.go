@@ -79,6 +79,7 @@ func build(d *Document) []node {
 	for i := range d.Contrasts {
 		out = append(out, contrastSection(&d.Contrasts[i], i)...)
 	}
+	out = append(out, wholeGuards(d.Guards)...)
 	out = append(out, howToRead(rules, orders, pointwise, len(d.Contrasts) > 0)...)
 	return append(out, record(&d.Record)...)
 }
@@ -104,6 +105,15 @@ func summary(d *Document) []node {
 		text += fmt.Sprintf("; %d of those shown here bear flags", flagged)
 	}
 	text += ". "
+	failing := 0
+	for i := range d.Guards {
+		if len(d.Guards[i].Failed) > 0 {
+			failing++
+		}
+	}
+	if failing > 0 {
+		text += notHolding(failing)
+	}
 	switch {
 	case s.Ledger == "":
 		return []node{para{text + "Nothing has been accepted yet, so there is no ledger to compare with."}}
@@ -296,10 +306,10 @@ func overview(c *Curve) grid {
 		row := append(append([]string(nil), f.Group...), fmt.Sprint(f.N), fmt.Sprint(f.Distinct), rule, fixed(f.EDF, 2), short(f.Lambda, 4), short(f.Sigma, 4))
 		var marks []string
 		for _, x := range f.Flags {
-			n, ok := number[x.Name]
+			n, ok := number[x.Name+"\x00"+x.Text]
 			if !ok {
 				n = len(g.notes) + 1
-				number[x.Name] = n
+				number[x.Name+"\x00"+x.Text] = n
 				g.notes = append(g.notes, strings.ReplaceAll(x.Name, "_", " ")+": "+x.Text)
 			}
 			marks = append(marks, fmt.Sprint(n))

@@ -71,6 +71,11 @@ func Terminal(w io.Writer, d *Document, opt TerminalOptions) {
 			fmt.Fprintln(w, on+wrapText(fmt.Sprintf("%s %s: %s", word, s.Group, s.Why), opt.Width, "    ")+off)
 		}
 	}
+	for i := range d.Guards {
+		if g := &d.Guards[i]; len(g.Failed) > 0 {
+			fmt.Fprintln(w, alarm+wrapText(guardLine(g), opt.Width, "    ")+plain)
+		}
+	}
 	fmt.Fprintln(w)
 	switch {
 	case d.Summary.Ledger == "":

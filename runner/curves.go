@@ -35,6 +35,7 @@ type curveFits struct {
 	seed    int64                  // of draws from a posterior
 	reused  []bool                 // of fits[i]: it came from the store
 	verdict []verdict              // of fits[i]; set by judge
+	guards  []GuardRecord          // how the guards on the curve went; set by judge
 	tests   map[string]testedPairs // of contrasts
 }
 

@@ -37,6 +37,7 @@ type Record struct {
 	Dated    string        `json:"dated,omitempty"`  // the day that reports bear
 	Outputs  []Output      `json:"outputs"`
 	Refused  []string      `json:"refused,omitempty"`
+	Guards   []GuardRecord `json:"guards,omitempty"`
 }
 
 // SpecFile is the spec as it was run.

@@ -106,13 +106,20 @@ func Execute(ctx context.Context, s *spec.Study, opt Options) (*Run, error) {
 		if err != nil {
 			return nil, err
 		}
-		judge(s, cf)
+		if err := judge(ctx, s, cf, opt.Workers); err != nil {
+			return nil, err
+		}
 		r.curves[c.Name.Text] = cf
 	}
 	if err := r.sameInputs(); err != nil {
 		return nil, err
 	}
 	r.Record = r.record(started)
+	guards, whole, err := r.judgeWhole()
+	if err != nil {
+		return nil, err
+	}
+	r.Record.Guards, r.Record.Refused = guards, append(r.Record.Refused, whole...)
 	if then := opt.again; then != nil {
 		r.Record.Moved, r.Record.Ledger, r.Record.Dated = then.Moved, then.Ledger, then.Dated
 	} else {
@@ -256,6 +263,15 @@ func (r *Run) results() string {
 		k.add("curve", c.Name, c.Object)
 		for _, v := range c.Verdicts {
 			k.add("verdict", v.Fit, v.Outcome, v.Why)
+		}
+	}
+	for _, g := range r.Record.Guards {
+		if g.Kind == spec.OnCurve {
+			continue // verdicts say it
+		}
+		k.add("guard", g.Guard, g.Judged)
+		for _, f := range g.Failed {
+			k.add("failed", f.Of, f.Found)
 		}
 	}
 	return k.digest()

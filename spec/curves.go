@@ -76,6 +76,8 @@ func (r *reader) curve(b *block, name Name, kinds map[string]string) {
 		r.identifier(names[i], "reading")
 		if q, ok := r.reading(k, names[i], date); ok && r.suits(k, &q, c.Order) {
 			c.Readings = append(c.Readings, q)
+		} else {
+			r.badReadings[name.Text] = append(r.badReadings[name.Text], names[i].Text)
 		}
 	}
 	c.Tolerance = Tolerance{HalfWidths: 0.25}

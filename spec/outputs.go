@@ -73,48 +73,6 @@ func (r *reader) contrast(b *block, name Name, kinds map[string]string) {
 	b.finish()
 }
 
-// FitNumbers and FitFlags are what a guard's condition may name beside the by
-// columns.
-var (
-	FitNumbers = []string{"n", "distinct", "edf", "lambda", "rss", "sigma", "gcv", "loocv", "reml", "score"}
-	FitFlags   = []string{"at_bound", "straight_line", "constant", "parabola", "target_unreached", "several_minima", "autocorrelated", "high_leverage", "few_distinct", "extrapolated"}
-)
-
-func (r *reader) guard(b *block, name Name, kinds map[string]string) {
-	g := &Guard{Name: name}
-	r.study.Guards = append(r.study.Guards, g)
-	on := b.word("on", true, "a curve")
-	g.On = on.Text
-	cols := map[string]expr.Kind{}
-	c := r.curveNamed(on, kinds)
-	if c != nil {
-		cols = schema(c.By)
-	}
-	for _, n := range FitNumbers {
-		cols[n] = expr.Number
-	}
-	for _, n := range FitFlags {
-		cols[n] = expr.Bool
-	}
-	g.Require = b.program("require", true, cols, expr.Bool)
-	g.Source = b.source("require")
-	if g.Require != nil {
-		g.BeforeFit = true
-		for _, u := range g.Require.Uses() {
-			if u != "n" && u != "distinct" && (slices.Contains(FitNumbers, u) || slices.Contains(FitFlags, u)) {
-				g.BeforeFit = false
-			}
-		}
-	}
-	o := b.word("otherwise", true, "warn, skip or refuse")
-	g.Otherwise = o.Text
-	if o.Text != "" && o.Text != Warn && o.Text != Skip && o.Text != Refuse {
-		r.fail(o.Range, fmt.Sprintf("otherwise %q", o.Text), "expected warn, skip or refuse%s", expr.Suggest(o.Text, []string{Warn, Skip, Refuse}))
-	}
-	g.Reason = b.text("reason", false)
-	b.finish()
-}
-
 var exportKinds = []string{ExportGrid, ExportFits, ExportReadings, ExportEvidence, ExportResiduals, ExportCoefficients, ExportTests}
 
 func (r *reader) export(b *block, name Name, kinds map[string]string) {

@@ -225,12 +225,22 @@ const (
 	Refuse = "refuse"
 )
 
-// Guard is a condition on each fit of a curve, with a consequence.
+// What a guard stands on, for Guard.Kind.
+const (
+	OnCurve    = "curve"
+	OnContrast = "contrast"
+	OnInput    = "input"
+	OnStudy    = "study"
+)
+
+// Guard is a condition on each fit of a curve, on each pair of a contrast, on
+// an input or on the study as a whole, with a consequence.
 type Guard struct {
 	Name      Name
-	On        string        // a curve
-	Require   *expr.Program // Bool, over FitColumns and the by columns
-	BeforeFit bool          // Require uses only n, distinct and by columns
+	On        string // a curve, a contrast, an input; "study" for the study as a whole
+	Kind      string // of On: OnCurve, OnContrast, OnInput, OnStudy
+	Require   *expr.Program
+	BeforeFit bool // OnCurve: Require uses only n, distinct and by columns
 	Otherwise string
 	Reason    string
 	Source    string // Require as written
