@@ -120,9 +120,14 @@
 //	}
 //
 //	guard "NAME" {
-//	  on        = CURVE          required
-//	  require   = CONDITION      required, over FitNumbers, FitFlags and the by columns
-//	  otherwise = warn, skip or refuse   required
+//	  on        = CURVE, CONTRAST, INPUT or study   required
+//	  require   = CONDITION      required, over what it stands on:
+//	                             a curve's fits: FitNumbers, FitFlags, the by columns, and of each
+//	                             reading NAME, NAME_lower, NAME_upper, of an extreme also NAME_at;
+//	                             a contrast's pairs: PairNumbers and the by columns that remain;
+//	                             an input: InputNumbers; the study: StudyNumbers, of all curves
+//	                             together. A condition that is missing does not hold
+//	  otherwise = warn, skip or refuse   required; skip only on a curve
 //	  reason    = TEXT
 //	}
 //
