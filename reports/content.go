@@ -105,15 +105,7 @@ func summary(d *Document) []node {
 		text += fmt.Sprintf("; %d of those shown here bear flags", flagged)
 	}
 	text += ". "
-	failing := 0
-	for i := range d.Guards {
-		if len(d.Guards[i].Failed) > 0 {
-			failing++
-		}
-	}
-	if failing > 0 {
-		text += notHolding(failing)
-	}
+	text += notHolding(d.Guards)
 	switch {
 	case s.Ledger == "":
 		return []node{para{text + "Nothing has been accepted yet, so there is no ledger to compare with."}}

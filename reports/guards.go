@@ -41,9 +41,19 @@ func guardLine(g *Guard) string {
 	return strings.ReplaceAll(s, "\n", " ")
 }
 
-// notHolding counts guards that stand on no curve and do not hold.
-func notHolding(n int) string {
-	if n == 1 {
+// notHolding counts, in a sentence, the guards that stand on no curve and do
+// not hold.
+func notHolding(guards []Guard) string {
+	n := 0
+	for i := range guards {
+		if len(guards[i].Failed) > 0 {
+			n++
+		}
+	}
+	switch n {
+	case 0:
+		return ""
+	case 1:
 		return "1 guard on a contrast, an input or the study does not hold (see Guards). "
 	}
 	return fmt.Sprintf("%d guards on contrasts, inputs or the study do not hold (see Guards). ", n)
