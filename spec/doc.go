@@ -135,6 +135,8 @@
 //	  of   = CURVE or CONTRAST   required
 //	  what = grid, fits, readings, evidence, residuals or coefficients   required; of a contrast grid or tests
 //	  file = PATH                required, ending in .csv, under the study's folder
+//	  safe_cells = BOOL          default true: text that a spreadsheet would take for a
+//	                             formula gets a leading apostrophe
 //	  schema = BOOL              write a Table Schema beside it, FILE with .schema.json for .csv
 //	}
 //

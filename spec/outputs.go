@@ -110,6 +110,9 @@ func (r *reader) export(b *block, name Name, kinds map[string]string) {
 		}
 	}
 	e.Schema = b.flag("schema")
+	if e.SafeCells = true; b.take("safe_cells", false) != nil {
+		e.SafeCells = b.flag("safe_cells")
+	}
 	b.finish()
 }
 

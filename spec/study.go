@@ -253,12 +253,13 @@ const (
 
 // Export is a table written to a file.
 type Export struct {
-	Name   Name
-	Of     string // a curve; for grid also a contrast
-	What   string
-	File   string
-	Schema bool // a Table Schema beside the file
-	Range  hcl.Range
+	Name      Name
+	Of        string // a curve; for grid also a contrast
+	What      string
+	File      string
+	Schema    bool // a Table Schema beside the file
+	Range     hcl.Range
+	SafeCells bool // text that a spreadsheet would take for a formula gets an apostrophe; true by default
 }
 
 // SchemaFile is the path of the Table Schema beside the export, "" where none
