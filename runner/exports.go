@@ -85,7 +85,7 @@ func (r *Run) export(ctx context.Context, e *spec.Export, out io.Writer) error {
 type exporter struct {
 	cf    *curveFits
 	what  string
-	safe  bool // cells of text cannot be taken for formulas
+	safe  bool                  // cells of text cannot be taken for formulas
 	lines map[string][]rowPlace // of residuals: the rows of each group
 }
 
