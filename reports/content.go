@@ -112,7 +112,7 @@ func summary(d *Document) []node {
 	case len(s.Moved) == 0:
 		return []node{para{text + "Nothing moved against the ledger (" + s.Ledger + ")."}}
 	}
-	out := []node{para{text + differ(len(s.Moved)) + " from the ledger (" + s.Ledger + ")."}}
+	out := []node{para{text + differ(len(s.Moved)) + " from the ledger (" + s.Ledger + ")." + pending(s.Moved)}}
 	return append(out, movedTable(s.Moved))
 }
 
@@ -121,6 +121,24 @@ func differ(n int) string {
 		return "1 fit differs"
 	}
 	return fmt.Sprintf("%d fits differ", n)
+}
+
+// pending says how many of the fits that differ were left out of the last
+// acceptance.
+func pending(moved []Move) string {
+	n := 0
+	for _, m := range moved {
+		if m.Pending {
+			n++
+		}
+	}
+	switch n {
+	case 0:
+		return ""
+	case 1:
+		return " 1 of them is pending: that acceptance left it as it was."
+	}
+	return fmt.Sprintf(" %d of them are pending: that acceptance left them as they were.", n)
 }
 
 func movedTable(moved []Move) grid {

@@ -32,7 +32,8 @@ type Summary struct {
 // Move is one fit that differs from the ledger.
 type Move struct {
 	Fit            string  // firmness[cultivar=Aroma, store=air]
-	What           string  // "shifted", "edf changed", "new", "gone"; several joined by ", "
+	What           string  // "shifted", "edf changed", "new", "gone", "pending"; several joined by ", "
+	Pending        bool    // left as it was by the last acceptance, which took others
 	Shift          float64 // largest |new - old| over the old band's half-width; NaN where there is none
 	At             float64 // where on the x axis; NaN where there is none
 	AtText         string  // At as it is to be read (a date where the axis is one)

@@ -9,6 +9,7 @@ import (
 	"regexp"
 	"strings"
 	"time"
+	"unicode"
 
 	"gonum.org/v1/plot"
 	"gonum.org/v1/plot/font"
@@ -306,12 +307,32 @@ func render(p *plot.Plot, w, h vg.Length, title, desc string, t theme) []byte {
 
 func hex(c color.RGBA) string { return fmt.Sprintf("#%02X%02X%02X", c.R, c.G, c.B) }
 
-// printable drops control characters, which XML cannot carry.
+// printable takes out control characters, which XML cannot carry and a terminal
+// would obey, and shows what would pass unseen or turn the direction of what
+// stands beside it: two names that differ in it must not look alike.
 func printable(s string) string {
-	return strings.Map(func(r rune) rune {
-		if r < ' ' || r == 0x7f || r == 0xfffe || r == 0xffff {
+	s = strings.Map(func(r rune) rune {
+		if r < ' ' || r >= 0x7f && r < 0xa0 || r == 0xfffe || r == 0xffff {
 			return ' '
 		}
 		return r
 	}, strings.ToValidUTF8(s, "�"))
+	if !strings.ContainsFunc(s, unseen) {
+		return s
+	}
+	var b strings.Builder
+	for _, r := range s {
+		if unseen(r) {
+			fmt.Fprintf(&b, "<U+%04X>", r)
+		} else {
+			b.WriteRune(r)
+		}
+	}
+	return b.String()
+}
+
+// unseen tells of format characters (zero-width, bidirectional) and of those for
+// private use.
+func unseen(r rune) bool {
+	return r != 0xad && unicode.In(r, unicode.Cf, unicode.Co, unicode.Zl, unicode.Zp)
 }

@@ -302,3 +302,15 @@ func TestRounded(t *testing.T) {
 		}
 	}
 }
+
+// TestPrintable: what a terminal would obey goes, what nobody would see is
+// shown, and the rest stays as it is.
+func TestPrintable(t *testing.T) {
+	for in, want := range map[string]string{
+		"Ärmel 5 µm": "Ärmel 5 µm", "a\x1b[31mb": "a [31mb", "a\u202eb": "a<U+202E>b", "a\u200bb": "a<U+200B>b", "a\u0085b": "a b", "\xff": "�", "e\u0301": "e\u0301",
+	} {
+		if got := printable(in); got != want {
+			t.Errorf("%q is shown as %q, want %q", in, got, want)
+		}
+	}
+}

@@ -83,7 +83,13 @@ func Terminal(w io.Writer, d *Document, opt TerminalOptions) {
 	case len(d.Summary.Moved) == 0:
 		fmt.Fprintln(w, wrapText("Nothing moved against the ledger ("+d.Summary.Ledger+").", opt.Width, "  "))
 	default:
-		fmt.Fprintln(w, alarm+wrapText(fmt.Sprintf("%s from the ledger (%s):", differ(len(d.Summary.Moved)), d.Summary.Ledger), opt.Width, "  ")+plain)
+		text := fmt.Sprintf("%s from the ledger (%s)", differ(len(d.Summary.Moved)), d.Summary.Ledger)
+		if left := pending(d.Summary.Moved); left != "" {
+			text += "." + left
+		} else {
+			text += ":"
+		}
+		fmt.Fprintln(w, alarm+wrapText(text, opt.Width, "  ")+plain)
 		g := movedTable(d.Summary.Moved)
 		rows := g.rows
 		if len(rows) > mostLines {

@@ -11,16 +11,34 @@ import (
 	"time"
 
 	"batten/runner/ledger"
+	"batten/runner/signature"
 	"batten/runner/store"
 	"batten/spec"
 )
 
-// Accept makes the last run the ledger. It refuses without a reason, when the
-// last run is not of the present spec and data, and when a guard refused.
+// Consent is what somebody accepts, and why.
+type Consent struct {
+	Reason string
+	Only   []string // CURVE or CURVE[col=value, ...]; none: the whole run
+	Key    *signature.Key
+}
+
+// Accept makes the last run the ledger, whole and unsigned.
 func Accept(ctx context.Context, s *spec.Study, reason string, opt Options) (*ledger.Acceptance, error) {
+	return AcceptAs(ctx, s, Consent{Reason: reason}, opt)
+}
+
+// AcceptAs makes the last run the ledger, or some of its fits; the others keep
+// their record. It refuses without a reason, when the last run is not of the
+// present spec and data, and when a guard refused a fit that is to be accepted.
+func AcceptAs(ctx context.Context, s *spec.Study, consent Consent, opt Options) (*ledger.Acceptance, error) {
 	opt.fill()
-	if strings.TrimSpace(reason) == "" {
+	if strings.TrimSpace(consent.Reason) == "" {
 		return nil, usagef("accept needs a reason: batten accept %s --reason \"why these curves are to stand\"", s.File)
+	}
+	only, err := parseOnly(consent.Only)
+	if err != nil {
+		return nil, err
 	}
 	st, err := store.Open(filepath.Join(s.Dir, ".batten"))
 	if err != nil {
@@ -36,15 +54,54 @@ func Accept(ctx context.Context, s *spec.Study, reason string, opt Options) (*le
 		return nil, err
 	}
 	rec := r.Record
-	if len(rec.Refused) > 0 {
+	if len(rec.Refused) > 0 && len(only) == 0 {
 		return nil, &RefusedError{Run: rec.Run, Refused: rec.Refused}
 	}
+	if err := r.isPresent(ctx, s); err != nil {
+		return nil, err
+	}
+	t := &taking{r: r, only: only, workers: opt.Workers, curves: map[string]*ledger.Accepted{},
+		state: &ledger.State{Study: s.Title}, refusedElsewhere: map[string]bool{}}
+	if r.state != nil {
+		t.state.Accepted = append(t.state.Accepted, r.state.Accepted...)
+	}
+	if err := t.all(ctx); err != nil {
+		return nil, err
+	}
+	a := t.entry
+	a.Who, a.When, a.Why, a.Run = who(s.Dir), stamp(acceptTime(opt)), strings.TrimSpace(consent.Reason), rec.Run
+	a.Spec, a.Inputs = ledger.Input{Path: rec.Spec.Path, SHA256: rec.Spec.SHA256}, []ledger.Input{}
+	a.Program, a.Methods = rec.Program, rec.Methods
+	for _, in := range rec.Inputs {
+		for _, f := range in.Files {
+			a.Inputs = append(a.Inputs, ledger.Input{Path: f.Path, SHA256: f.SHA256})
+		}
+	}
+	change := ledger.Change{State: t.state, Curves: t.curves}
+	if consent.Key != nil {
+		a.Signer, change.Sign = consent.Key.Fingerprint(), consent.Key.Sign
+	}
+	if err := t.state.Append(a); err != nil {
+		return nil, err
+	}
+	if err := ledger.Write(ledgerDir(s), change); err != nil {
+		return nil, err
+	}
+	if last := r.state.Last(); last != nil && last.Signer != "" && consent.Key == nil {
+		opt.Progress.Note("the ledger is no longer signed: the signature was of the acceptance before, and was taken away (accept --sign KEYFILE signs anew)")
+	}
+	return t.state.Last(), nil
+}
+
+// isPresent makes sure that the run is of the spec and data as they are.
+func (r *Recorded) isPresent(ctx context.Context, s *spec.Study) error {
+	rec := r.Record
 	if rec.Spec.SHA256 != s.Hash() {
-		return nil, usagef("the spec has changed since run %s; run the study again, look at it, then accept", rec.Run)
+		return usagef("the spec has changed since run %s; run the study again, look at it, then accept", rec.Run)
 	}
 	files, err := hashInputs(ctx, s)
 	if err != nil {
-		return nil, err
+		return err
 	}
 	for _, in := range rec.Inputs {
 		now := files[in.Name]
@@ -53,45 +110,10 @@ func Accept(ctx context.Context, s *spec.Study, reason string, opt Options) (*le
 			same = now[i].SHA256 == in.Files[i].SHA256 && now[i].Path == in.Files[i].Path
 		}
 		if !same {
-			return nil, usagef("the data of input %q have changed since run %s; run the study again, look at it, then accept", in.Name, rec.Run)
+			return usagef("the data of input %q have changed since run %s; run the study again, look at it, then accept", in.Name, rec.Run)
 		}
 	}
-	state := r.state
-	if state == nil {
-		state = &ledger.State{}
-	}
-	state.Format, state.Study, state.Curves = ledger.Format, s.Title, nil
-	curves := map[string]*ledger.Accepted{}
-	fits := 0
-	for _, c := range s.Curves {
-		cf, err := r.curve(c.Name.Text)
-		if err != nil {
-			return nil, err
-		}
-		e, err := entries(ctx, cf, opt.Workers)
-		if err != nil {
-			return nil, err
-		}
-		curves[c.Name.Text] = &ledger.Accepted{By: cf.by, Entries: e}
-		fits += len(e)
-		state.Curves = append(state.Curves, ledger.CurveHeader{Name: c.Name.Text, Along: c.Along.Name.Text, Unit: c.Along.Unit,
-			Response: c.Response.Name.Text, RespUnit: c.Response.Unit, By: append([]string{}, cf.by...)})
-	}
-	a := ledger.Acceptance{
-		Who: who(s.Dir), When: stamp(acceptTime(opt)), Why: strings.TrimSpace(reason), Run: rec.Run,
-		Spec: ledger.Input{Path: rec.Spec.Path, SHA256: rec.Spec.SHA256}, Inputs: []ledger.Input{},
-		Program: rec.Program, Methods: rec.Methods, Fits: fits, Moved: len(rec.Moved),
-	}
-	for _, in := range rec.Inputs {
-		for _, f := range in.Files {
-			a.Inputs = append(a.Inputs, ledger.Input{Path: f.Path, SHA256: f.SHA256})
-		}
-	}
-	state.Accepted = append(state.Accepted, a)
-	if err := ledger.Write(ledgerDir(s), state, curves); err != nil {
-		return nil, err
-	}
-	return &a, nil
+	return nil
 }
 
 // acceptTime is now, or SOURCE_DATE_EPOCH where it is set.

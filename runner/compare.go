@@ -27,7 +27,7 @@ type Comparison struct {
 type Movement struct {
 	Curve, Fit       string
 	Group            []string
-	What             []string // new, gone, shifted, edf changed, rule changed, NAME moved
+	What             []string // new, gone, shifted, edf changed, rule changed, NAME moved, pending
 	Why              string   // of a fit that is gone
 	Shift            float64  // the largest, in half-widths of the old band
 	By               float64  // there, new less old, in the response's unit
@@ -100,6 +100,14 @@ func Compare(ctx context.Context, s *spec.Study, from, to string, opt Options) (
 	}
 	if err := k.goneCurves(); err != nil {
 		return nil, err
+	}
+	if k.then == nil {
+		left := pendingFits(now.state)
+		for i := range k.out.Moves {
+			if m := &k.out.Moves[i]; left[m.Fit] {
+				m.What = append(m.What, "pending")
+			}
+		}
 	}
 	sort.SliceStable(k.out.Moves, func(i, j int) bool { return matters(&k.out.Moves[i]) > matters(&k.out.Moves[j]) })
 	return k.out, nil

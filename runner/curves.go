@@ -180,7 +180,7 @@ func openCurve(st *store.Store, c *spec.Curve, seed int64, dig string, b []byte)
 			if !ok {
 				return fmt.Errorf("part %.12s of curve %q is no longer in the store", p, c.Name.Text)
 			}
-			return cbor.Unmarshal(obj, &parts[i])
+			return readPart(obj, len(c.By), &parts[i])
 		})
 	}
 	if err := eg.Wait(); err != nil {

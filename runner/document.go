@@ -78,7 +78,7 @@ func (r *Run) Document(ctx context.Context, title string, show []string, brief b
 	}
 	for _, m := range r.Record.Moved {
 		d.Summary.Moved = append(d.Summary.Moved, reports.Move{
-			Fit: m.Fit, What: strings.Join(m.What, ", "), Shift: val(m.Shift), At: val(m.At), AtText: m.AtText,
+			Fit: m.Fit, What: strings.Join(m.words(), ", "), Pending: m.Pending, Shift: val(m.Shift), At: val(m.At), AtText: m.AtText,
 			OldEDF: val(m.OldEDF), NewEDF: val(m.NewEDF)})
 	}
 	d.Record = r.provenance()

@@ -37,9 +37,13 @@ type GuardRecord struct {
 	Require   string         `json:"require"`
 	Otherwise string         `json:"otherwise"`
 	Reason    string         `json:"reason,omitempty"`
-	Judged    int            `json:"judged"` // fits, pairs; 1 for an input or the study
+	Outcome   string         `json:"outcome"` // Held; else what Otherwise says
+	Judged    int            `json:"judged"`  // fits, pairs; 1 for an input or the study
 	Failed    []GuardFailure `json:"failed,omitempty"`
 }
+
+// Held is the outcome of a guard whose condition holds throughout.
+const Held = "held"
 
 // GuardFailure is something for which a guard's condition does not hold.
 type GuardFailure struct {
@@ -49,7 +53,7 @@ type GuardFailure struct {
 }
 
 func newGuardRecord(g *spec.Guard) GuardRecord {
-	return GuardRecord{Guard: g.Name.Text, On: g.On, Kind: g.Kind, Require: g.Source, Otherwise: g.Otherwise, Reason: g.Reason}
+	return GuardRecord{Guard: g.Name.Text, On: g.On, Kind: g.Kind, Require: g.Source, Otherwise: g.Otherwise, Reason: g.Reason, Outcome: Held}
 }
 
 // fail notes that the condition does not hold for row i, and says why.
@@ -63,6 +67,7 @@ func (rec *GuardRecord) fail(g *spec.Guard, of string, quantity func(string) *ex
 	}
 	f.Found = strings.Join(found, ", ")
 	rec.Failed = append(rec.Failed, f)
+	rec.Outcome = g.Otherwise
 	what := "does not hold"
 	if f.Missing {
 		what = "has no value, which counts as not holding"

@@ -156,7 +156,7 @@ func TestGuards(t *testing.T) {
 				for _, f := range g.Failed {
 					got = append(got, f.Of)
 				}
-				if strings.Join(got, "; ") != strings.Join(c.failed, "; ") || g.Judged != c.judged || g.Otherwise != otherwise || g.Require != c.require {
+				if strings.Join(got, "; ") != strings.Join(c.failed, "; ") || g.Judged != c.judged || g.Otherwise != otherwise || (g.Outcome == Held) != (len(c.failed) == 0) || g.Outcome != Held && g.Outcome != otherwise || g.Require != c.require {
 					t.Fatalf("recorded: %+v", g)
 				}
 				if len(c.failed) > 0 {

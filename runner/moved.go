@@ -19,6 +19,8 @@ type Move struct {
 	AtText string   `json:"at_text,omitempty"`
 	OldEDF *float64 `json:"old_edf,omitempty"`
 	NewEDF *float64 `json:"new_edf,omitempty"`
+
+	Pending bool `json:"pending,omitempty"` // left as it was by the last acceptance, which took others
 }
 
 const (
@@ -30,11 +32,16 @@ const (
 // ledgerDir is where a study's ledger lies.
 func ledgerDir(s *spec.Study) string { return filepath.Join(s.Dir, "ledger") }
 
-// entries makes the ledger's rows of a curve's standing fits.
-func entries(ctx context.Context, cf *curveFits, workers int) ([]ledger.Entry, error) {
+// entries makes the ledger's rows of a curve's standing fits, or of those that
+// want names.
+func entries(ctx context.Context, cf *curveFits, want func(fit string) bool, workers int) ([]ledger.Entry, error) {
 	out := make([]ledger.Entry, len(cf.fits))
+	wanted := make([]bool, len(cf.fits))
 	err := eachFit(ctx, cf, workers, func(ft *fitter, i int) error {
 		f := cf.fits[i]
+		if wanted[i] = want == nil || want(fitName(cf.def.Name.Text, label(cf.by, f.Group))); !wanted[i] {
+			return nil
+		}
 		d, err := ft.derive(cf, i, wants{readings: true})
 		if err != nil {
 			return err
@@ -57,7 +64,7 @@ func entries(ctx context.Context, cf *curveFits, workers int) ([]ledger.Entry, e
 	}
 	standing := out[:0]
 	for i := range out {
-		if cf.verdict[i].fits() {
+		if wanted[i] {
 			standing = append(standing, out[i])
 		}
 	}

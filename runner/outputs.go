@@ -24,8 +24,13 @@ import (
 // that a run does not end in a folder it cannot write to.
 func checkOutputs(s *spec.Study) error {
 	for _, e := range s.Exports {
-		if _, err := store.OutputPath(s.Dir, e.File); err != nil {
-			return outputError(s, e.Range.Start.Line, e.Range.Start.Column, err)
+		for _, f := range []string{e.File, e.SchemaFile()} {
+			if f == "" {
+				continue
+			}
+			if _, err := store.OutputPath(s.Dir, f); err != nil {
+				return outputError(s, e.Range.Start.Line, e.Range.Start.Column, err)
+			}
 		}
 	}
 	for _, r := range s.Reports {
@@ -64,6 +69,13 @@ func (r *Run) writeOutputs(ctx context.Context, st *store.Store) error {
 	var outs []out
 	for _, e := range r.Study.Exports {
 		outs = append(outs, out{e.File, r.exportKey(e), func(w io.Writer) error { return r.export(ctx, e, w) }})
+		if e.Schema {
+			o, err := r.schemaOut(e)
+			if err != nil {
+				return err
+			}
+			outs = append(outs, o)
+		}
 	}
 	for _, o := range outs {
 		if err := ctx.Err(); err != nil {
@@ -180,7 +192,7 @@ func (r *Run) writeReport(ctx context.Context, st *store.Store, rep *spec.Report
 	k.add("dated", r.Record.Dated)
 	k.add("ledger", r.Record.Ledger)
 	for _, m := range r.Record.Moved {
-		k.add("moved", m.Fit, strings.Join(m.What, ","), val(m.Shift), val(m.At), val(m.OldEDF), val(m.NewEDF))
+		k.add("moved", m.Fit, strings.Join(m.words(), ","), val(m.Shift), val(m.At), val(m.OldEDF), val(m.NewEDF))
 	}
 	var doc *reports.Document // made once, and only if some file needs it
 	document := func() (*reports.Document, error) {

@@ -6,8 +6,6 @@ import (
 	"math"
 	"sort"
 
-	"github.com/fxamacker/cbor/v2"
-
 	"batten/runner/table"
 	"batten/spec"
 	"batten/spec/expr"
@@ -142,7 +140,7 @@ func (r *curveRun) part(ft *fitter, c *spec.Curve, w *weighing, j *job, shared m
 	slot := "part/" + c.Name.Text + "/" + fmt.Sprint(j.number)
 	if b, dig, ok := r.store.Get(text); ok {
 		var p storedPart
-		if cbor.Unmarshal(b, &p) == nil && len(p.Fits) == len(fits) {
+		if readPart(b, len(by), &p) == nil && len(p.Fits) == len(fits) {
 			j.out, j.digest = &p, dig
 			for i := range j.reused {
 				j.reused[i] = true
@@ -156,7 +154,7 @@ func (r *curveRun) part(ft *fitter, c *spec.Curve, w *weighing, j *job, shared m
 	if dig, ok := r.store.Slot(slot); ok {
 		if b, ok := r.store.Object(dig); ok {
 			var p storedPart
-			if cbor.Unmarshal(b, &p) == nil {
+			if readPart(b, len(by), &p) == nil {
 				for _, f := range p.Fits {
 					old[label(by, f.Group)+"\n"+f.Key] = f
 				}

@@ -11,6 +11,7 @@ import (
 	"strconv"
 	"strings"
 
+	"batten/runner/provenance"
 	"batten/runner/store"
 )
 
@@ -37,7 +38,11 @@ type Record struct {
 	Dated    string        `json:"dated,omitempty"`  // the day that reports bear
 	Outputs  []Output      `json:"outputs"`
 	Refused  []string      `json:"refused,omitempty"`
-	Guards   []GuardRecord `json:"guards,omitempty"`
+	Guards   []GuardRecord `json:"guards,omitempty"` // every guard's result, in the order of the spec
+
+	Who     string              `json:"who,omitempty"`     // who ran it, where known
+	Against []FileRecord        `json:"against,omitempty"` // the ledger's files that it was compared with
+	Modules []provenance.Module `json:"modules,omitempty"` // that the program was built of
 }
 
 // SpecFile is the spec as it was run.

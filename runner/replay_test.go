@@ -26,6 +26,10 @@ func replay(t *testing.T, dir, run, folder string) (*Replayed, error) {
 // store have changed since; what has been tampered with is found, with its
 // place; missing inputs are named.
 func TestReplay(t *testing.T) {
+	// a folder of its own, for what other tests replay at the same time is not left behind
+	temp := t.TempDir()
+	t.Setenv("TMPDIR", temp)
+	t.Setenv("TMP", temp) // windows
 	rows := rowsOf(4, 30)
 	dir := write(t, "gcv", map[string][]string{"d1.csv": rows[:60], "d2.csv": rows[60:]})
 	execute(t, dir, 2)

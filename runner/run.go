@@ -121,12 +121,12 @@ func Execute(ctx context.Context, s *spec.Study, opt Options) (*Run, error) {
 	}
 	r.Record.Guards, r.Record.Refused = guards, append(r.Record.Refused, whole...)
 	if then := opt.again; then != nil {
-		r.Record.Moved, r.Record.Ledger, r.Record.Dated = then.Moved, then.Ledger, then.Dated
+		r.Record.Moved, r.Record.Ledger, r.Record.Dated, r.Record.Against = then.Moved, then.Ledger, then.Dated, then.Against
 	} else {
 		if r.state, err = ledger.ReadState(ledgerDir(s)); err != nil {
 			return nil, err
 		}
-		r.Record.Ledger, r.Record.Dated = r.Ledger(), dated()
+		r.Record.Ledger, r.Record.Dated, r.Record.Against = r.Ledger(), dated(), ledgerFiles(s, r.state)
 		if err := r.findMoved(ctx); err != nil {
 			return nil, err
 		}
@@ -193,6 +193,7 @@ func (r *Run) record(started time.Time) *Record {
 		Started: stamp(started), Program: r.opt.Program, Go: runtime.Version(), Methods: Methods(),
 		Spec: SpecFile{Path: filepath.Base(s.File), SHA256: s.Hash(), Text: string(s.Text)}, Seed: s.Seed,
 		Moved: []Move{}, Outputs: []Output{},
+		Who: operator(s.Dir), Modules: modules(),
 	}
 	for _, in := range s.Inputs {
 		ir := InputRecord{Name: in.Name.Text}
@@ -297,15 +298,13 @@ func (r *Run) findMoved(ctx context.Context) error {
 		if r.Study.CurveByName(h.Name) != nil {
 			continue
 		}
-		old, err := ledger.ReadCurve(ledgerDir(r.Study), h.Name)
-		if err != nil || old == nil {
+		m, err := movedAway(r.Study, h.Name)
+		if err != nil {
 			return err
 		}
-		for _, e := range old.Entries {
-			r.Record.Moved = append(r.Record.Moved,
-				Move{Fit: fitName(h.Name, label(old.By, e.Group)), What: []string{"gone"}, OldEDF: ptr(e.EDF)})
-		}
+		r.Record.Moved = append(r.Record.Moved, m...)
 	}
+	markPending(r.state, r.Record.Moved)
 	return nil
 }
 
@@ -315,7 +314,7 @@ func (r *Run) Ledger() string {
 	if a == nil {
 		return ""
 	}
-	return fmt.Sprintf("accepted %s by %s: %s", a.When[:min(10, len(a.When))], a.Who, a.Why)
+	return acceptedLine(a)
 }
 
 // Check reads the heads of a study's inputs and looks at its outputs' places;

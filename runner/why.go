@@ -234,7 +234,7 @@ func (r *Recorded) Why(ctx context.Context, curve string, match []Match) (*Answe
 	a.History = ruleHistory(ctx, r.Study, curve, f.Exception, r.Record.Inputs)
 	a.Lines, a.LinesNote = r.fitLines(ctx, cf, f.Group)
 	a.trace = func(w io.Writer) error {
-		x := &exporter{cf: one, what: spec.ExportEvidence}
+		x := &exporter{cf: one, what: spec.ExportEvidence, safe: true}
 		if err := table.Header(w, append(append([]string(nil), one.by...), x.columns()...)); err != nil {
 			return err
 		}
@@ -248,6 +248,9 @@ func (r *Recorded) Why(ctx context.Context, curve string, match []Match) (*Answe
 		for k := range old.Entries {
 			if label(old.By, old.Entries[k].Group) == label(cf.by, f.Group) {
 				a.Accepted = &old.Entries[k]
+				if r.state != nil {
+					a.Ledger = fitLine(r.state, curve, fitName(curve, label(cf.by, f.Group)))
+				}
 			}
 		}
 	}

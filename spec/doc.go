@@ -16,6 +16,7 @@
 //	study {                      required, once
 //	  title = TEXT               required
 //	  owner = TEXT
+//	  licence = TEXT             of what the study makes: a URL, or a name
 //	  seed  = WHOLE              default 0; only k-fold draws use it
 //	}
 //
@@ -135,6 +136,9 @@
 //	  of   = CURVE or CONTRAST   required
 //	  what = grid, fits, readings, evidence, residuals or coefficients   required; of a contrast grid or tests
 //	  file = PATH                required, ending in .csv, under the study's folder
+//	  safe_cells = BOOL          default true: text that a spreadsheet would take for a
+//	                             formula gets a leading apostrophe
+//	  schema = BOOL              write a Table Schema beside it, FILE with .schema.json for .csv
 //	}
 //
 //	report "NAME" {

@@ -320,6 +320,7 @@ func (r *reader) header(top *block) {
 	}
 	r.study.Title = b.text("title", true)
 	r.study.Owner = b.text("owner", false)
+	r.study.Licence = strings.TrimSpace(b.text("licence", false))
 	seed, _ := b.whole("seed", false, 0, 1<<53, "a whole number from 0 to 2^53")
 	r.study.Seed = int64(seed)
 	b.finish()

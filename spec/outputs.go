@@ -102,6 +102,10 @@ func (r *reader) export(b *block, name Name, kinds map[string]string) {
 			e.File = r.output(s, a.Expr.Range(), ".csv")
 		}
 	}
+	e.Schema = b.flag("schema")
+	if e.SafeCells = true; b.take("safe_cells", false) != nil {
+		e.SafeCells = b.flag("safe_cells")
+	}
 	b.finish()
 }
 
@@ -172,25 +176,29 @@ func (r *reader) outputs() {
 			seen[strings.ToLower(in.File)] = place{in.FileRange, fmt.Sprintf("input %q", in.Name.Text)}
 		}
 	}
-	add := func(file string, at hcl.Range, what string) {
+	add := func(file string, at hcl.Range, what string) (free bool) {
 		if file == "" {
-			return
+			return false
 		}
 		k := strings.ToLower(file)
 		if first, dup := seen[k]; dup {
 			r.fail(at, fmt.Sprintf("the file %q, which %s has already (line %d)", file, first.what, first.at.Start.Line), "expected a file of its own for each")
-			return
+			return false
 		}
 		for _, in := range r.study.Inputs {
 			if ok, _ := path.Match(in.File, file); ok {
 				r.fail(at, fmt.Sprintf("the file %q, which input %q would read in the next run", file, in.Name.Text), "expected a name that %q does not match", in.File)
-				return
+				return false
 			}
 		}
 		seen[k] = place{at, what}
+		return true
 	}
 	for _, e := range r.study.Exports {
-		add(e.File, e.Range, fmt.Sprintf("export %q", e.Name.Text))
+		// two exports to one file would have one schema file too: that is said once
+		if add(e.File, e.Range, fmt.Sprintf("export %q", e.Name.Text)) {
+			add(e.SchemaFile(), e.Range, fmt.Sprintf("the schema of export %q", e.Name.Text))
+		}
 	}
 	for _, rep := range r.study.Reports {
 		for _, f := range rep.Files {

@@ -1,6 +1,8 @@
 package spec
 
 import (
+	"strings"
+
 	"github.com/hashicorp/hcl/v2"
 
 	"batten/spec/expr"
@@ -13,9 +15,10 @@ type Study struct {
 	Dir  string // the folder it stands in; every relative path starts here
 	Text []byte // the file as read
 
-	Title string
-	Owner string
-	Seed  int64
+	Title   string
+	Owner   string
+	Licence string // of the outputs: a URL, or a name; "" where none is given
+	Seed    int64
 
 	Inputs    []*Input // all lists are in the order of the file
 	Rows      []*Rows
@@ -259,11 +262,22 @@ const (
 
 // Export is a table written to a file.
 type Export struct {
-	Name  Name
-	Of    string // a curve; for grid also a contrast
-	What  string
-	File  string
-	Range hcl.Range
+	Name      Name
+	Of        string // a curve; for grid also a contrast
+	What      string
+	File      string
+	Schema    bool // a Table Schema beside the file
+	Range     hcl.Range
+	SafeCells bool // text that a spreadsheet would take for a formula gets an apostrophe; true by default
+}
+
+// SchemaFile is the path of the Table Schema beside the export, "" where none
+// is asked for.
+func (e *Export) SchemaFile() string {
+	if !e.Schema || e.File == "" {
+		return ""
+	}
+	return strings.TrimSuffix(e.File, ".csv") + ".schema.json"
 }
 
 // Report is a document for people.

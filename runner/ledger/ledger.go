@@ -3,8 +3,8 @@
 // The ledger is a folder of small text files kept in git: one CSV a curve with
 // one row a fit, sorted by group, so that one changed fit is one changed line;
 // and study.json, which says who accepted what, when and why, with every
-// earlier acceptance. The package reads and writes these files and compares
-// rows; it fits nothing.
+// earlier acceptance. The package reads these files, writes them whole or not
+// at all, and audits them; it fits nothing.
 package ledger
 
 import (
@@ -13,6 +13,7 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
+	"io"
 	"io/fs"
 	"math"
 	"os"
@@ -20,13 +21,10 @@ import (
 	"slices"
 	"strconv"
 	"strings"
-
-	"batten/runner/store"
-	"batten/runner/table"
 )
 
 // Format is raised when the files' layout changes.
-const Format = 1
+const Format = 2 // 2: every line has its own check
 
 // Entry is one accepted fit.
 type Entry struct {
@@ -85,8 +83,19 @@ type Acceptance struct {
 	Inputs  []Input  `json:"inputs"`
 	Program string   `json:"program"`
 	Methods []string `json:"methods"`
-	Fits    int      `json:"fits"`
-	Moved   int      `json:"moved"`
+	Fits    int      `json:"fits"`  // how many it took
+	Moved   int      `json:"moved"` // of these, how many had moved against the ledger before
+
+	// Of an acceptance of some fits and not others:
+	Only    []string `json:"only,omitempty"`    // what was asked for
+	Took    []string `json:"took,omitempty"`    // the fits it took; a bare curve's name stands for all its fits
+	Gone    []string `json:"gone,omitempty"`    // the fits that it took out of the ledger
+	Pending []string `json:"pending,omitempty"` // the fits that differed too and were left as they were
+
+	Signer   string `json:"signer,omitempty"`   // fingerprint of the key that signed the ledger
+	Previous string `json:"previous,omitempty"` // digest of the acceptance before this one
+
+	raw json.RawMessage // as it was read: what is on record is written back as it was
 }
 
 // Input is a file with its digest.
@@ -131,61 +140,12 @@ func ReadState(dir string) (*State, error) {
 	return &s, nil
 }
 
-// fixed columns between the by columns and the readings, and after them.
+// fixed columns between the by columns and the readings, and after them. check
+// is the digest of the line's other cells.
 var (
 	front = []string{"n", "distinct", "rule", "exception", "lambda", "edf", "rss", "sigma", "gcv", "loocv", "reml", "score", "flags"}
-	back  = []string{"from", "to", "curve", "half_width", "key"}
+	back  = []string{"from", "to", "curve", "half_width", "key", "check"}
 )
-
-// Encode writes a curve's CSV. Every entry must have the same readings.
-func (a *Accepted) Encode() ([]byte, error) {
-	var b bytes.Buffer
-	w := csv.NewWriter(&b)
-	header := append(append([]string(nil), a.By...), front...)
-	if len(a.Entries) > 0 {
-		for _, r := range a.Entries[0].Readings {
-			header = append(header, r.Name, r.Name+"_lower", r.Name+"_upper")
-		}
-	}
-	if err := w.Write(append(header, back...)); err != nil {
-		return nil, err
-	}
-	num := table.FormatNumber
-	for _, e := range a.Entries {
-		row := append([]string(nil), e.Group...)
-		row = append(row, strconv.Itoa(e.N), strconv.Itoa(e.Distinct), e.Rule, e.Exception,
-			num(e.Lambda), num(e.EDF), num(e.RSS), num(e.Sigma), num(e.GCV), num(e.LOOCV), num(e.REML), num(e.Score),
-			strings.Join(e.Flags, ";"))
-		for _, r := range e.Readings {
-			row = append(row, short(r.Value), short(r.Lower), short(r.Upper))
-		}
-		row = append(row, num(e.From), num(e.To), shortList(e.Curve), shortList(e.HalfWidth), e.Key)
-		if err := w.Write(row); err != nil {
-			return nil, err
-		}
-	}
-	w.Flush()
-	return b.Bytes(), w.Error()
-}
-
-// short writes a number to 9 significant digits: far finer than any interval
-// about it, and stable where the last bits are not.
-func short(v float64) string {
-	if math.IsNaN(v) {
-		return ""
-	}
-	r, _ := strconv.ParseFloat(strconv.FormatFloat(v, 'g', 9, 64), 64)
-	return table.FormatNumber(r)
-}
-
-func shortList(v []float64) string {
-	s := make([]string, len(v))
-	for i, x := range v {
-		r, _ := strconv.ParseFloat(strconv.FormatFloat(x, 'g', 7, 64), 64)
-		s[i] = table.FormatNumber(r)
-	}
-	return strings.Join(s, " ")
-}
 
 // ReadCurve reads ledger/NAME.csv; nil where there is none.
 func ReadCurve(dir, name string) (*Accepted, error) {
@@ -197,31 +157,66 @@ func ReadCurve(dir, name string) (*Accepted, error) {
 	if err != nil {
 		return nil, err
 	}
-	rows, err := csv.NewReader(bytes.NewReader(b)).ReadAll()
+	l, err := readLines(b)
 	if err != nil {
 		return nil, &CorruptError{path, err.Error()}
 	}
-	if len(rows) == 0 {
-		return nil, &CorruptError{path, "is empty"}
-	}
-	header := rows[0]
-	k := 0 // a by column may be called n: look for the whole run of fixed names
-	for k+len(front) <= len(header) && !slices.Equal(header[k:k+len(front)], front) {
-		k++
-	}
-	extra := len(header) - k - len(front) - len(back)
-	if extra < 0 || extra%3 != 0 {
-		return nil, &CorruptError{path, "has a header line that is not a ledger's"}
-	}
-	a := &Accepted{By: header[:k]}
-	for i, row := range rows[1:] {
-		e, err := decode(header, row, k, extra/3)
+	a := &Accepted{By: l.header[:l.by]}
+	for i, row := range l.rows {
+		e, err := decode(l.header, row, l.by, l.readings)
 		if err != nil {
-			return nil, &CorruptError{fmt.Sprintf("%s:%d", path, i+2), err.Error()}
+			return nil, &CorruptError{fmt.Sprintf("%s:%d", path, l.at[i]), err.Error()}
 		}
 		a.Entries = append(a.Entries, e)
 	}
 	return a, nil
+}
+
+// lines is a curve's file as it stands.
+type lines struct {
+	header       []string
+	rows         [][]string
+	at           []int // the line of each row in the file
+	by, readings int   // how many columns
+	checked      bool  // rows end in a check
+}
+
+func readLines(b []byte) (*lines, error) {
+	l := &lines{}
+	r := csv.NewReader(bytes.NewReader(b))
+	for {
+		row, err := r.Read()
+		if err == io.EOF {
+			break
+		}
+		if err != nil {
+			return nil, err
+		}
+		if l.header == nil {
+			l.header = row
+			continue
+		}
+		at, _ := r.FieldPos(0)
+		l.rows, l.at = append(l.rows, row), append(l.at, at)
+	}
+	if l.header == nil {
+		return nil, errors.New("is empty")
+	}
+	// a by column may be called n: look for the whole run of fixed names
+	for l.by+len(front) <= len(l.header) && !slices.Equal(l.header[l.by:l.by+len(front)], front) {
+		l.by++
+	}
+	tail := back
+	l.checked = l.header[len(l.header)-1] == "check"
+	if !l.checked { // as format 1 had it
+		tail = back[:len(back)-1]
+	}
+	extra := len(l.header) - l.by - len(front) - len(tail)
+	if extra < 0 || extra%3 != 0 || !slices.Equal(l.header[len(l.header)-len(tail):], tail) {
+		return nil, errors.New("has a header line that is not a ledger's")
+	}
+	l.readings = extra / 3
+	return l, nil
 }
 
 func decode(header, row []string, k, readings int) (e Entry, err error) {
@@ -261,26 +256,4 @@ func decode(header, row []string, k, readings int) (e Entry, err error) {
 		err = fmt.Errorf("curve has %d values, half_width %d", len(e.Curve), len(e.HalfWidth))
 	}
 	return e, err
-}
-
-// Write replaces the ledger: the curves' files first and study.json last, each
-// whole or not at all.
-func Write(dir string, s *State, curves map[string]*Accepted) error {
-	for i := range s.Curves {
-		h := &s.Curves[i]
-		b, err := curves[h.Name].Encode()
-		if err != nil {
-			return err
-		}
-		h.SHA256 = table.SHA256(b)
-		h.Fits = len(curves[h.Name].Entries)
-		if err := store.WriteFile(filepath.Join(dir, h.Name+".csv"), b); err != nil {
-			return err
-		}
-	}
-	b, err := json.MarshalIndent(s, "", "  ")
-	if err != nil {
-		return err
-	}
-	return store.WriteFile(filepath.Join(dir, "study.json"), append(b, '\n'))
 }

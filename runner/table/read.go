@@ -20,11 +20,13 @@ import (
 
 // Limits on what a file may hold.
 const (
-	maxCell   = 1 << 20 // bytes
-	maxText   = 4 << 30 // bytes of a file, decompressed
-	maxListed = 20      // problems that are listed
-	maxRows   = math.MaxInt32 - 1
-	maxHeader = 1 << 20
+	maxCell    = 1 << 20 // bytes
+	maxText    = 4 << 30 // bytes of a file, decompressed
+	maxListed  = 20      // problems that are listed
+	maxRatio   = 200     // of unpacked to packed bytes, from unpackFree on
+	unpackFree = 64 << 20
+	maxRows    = math.MaxInt32 - 1
+	maxHeader  = 1 << 20
 )
 
 // Table is a source's rows, column by column.
@@ -117,7 +119,13 @@ func plain(path string, raw []byte) ([]byte, error) {
 	if strings.HasSuffix(path, ".gz") {
 		z, err := gzip.NewReader(bytes.NewReader(raw))
 		if err == nil {
-			raw, err = io.ReadAll(io.LimitReader(z, maxText+1))
+			most := max(unpackFree, maxRatio*int64(len(raw)))
+			packed := len(raw)
+			raw, err = io.ReadAll(io.LimitReader(z, min(most, maxText)+1))
+			if int64(len(raw)) > most {
+				return nil, &Problems{List: []*Problem{{Path: path, Text: fmt.Sprintf(
+					"unpacks from %d bytes to more than %d times as many; unpack it yourself and look at it, then name the plain file", packed, maxRatio)}}}
+			}
 		}
 		if err != nil {
 			return nil, &Problems{List: []*Problem{{Path: path, Text: fmt.Sprintf("is no sound gzip file (%v); expected one, whole; copy or compress it again", err)}}}

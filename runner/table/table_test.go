@@ -230,14 +230,14 @@ func TestWorkers(t *testing.T) {
 // TestWriter: quoting, formulas, odd numbers.
 func TestWriter(t *testing.T) {
 	w := &Writer{SafeCells: true}
-	for _, s := range []string{"plain", `a"b`, "a,b", "a\nb", "=1+1", "-5", "-x", "@cmd", "+1", ""} {
+	for _, s := range []string{"plain", `a"b`, "a,b", "a\nb", "=1+1", "-5", "-x", "@cmd", "+1", "", "\t=1", " =1", "＝1", "＠x"} {
 		w.Text(s)
 	}
 	for _, v := range []float64{0, math.Copysign(0, -1), 0.1, 1e-7, 1e21, math.NaN(), math.Inf(1), math.Inf(-1), 123456.5} {
 		w.Number(v)
 	}
 	w.End()
-	want := "plain,\"a\"\"b\",\"a,b\",\"a\nb\",'=1+1,-5,'-x,'@cmd,+1,,0,0,0.1,1e-07,1e+21,,Inf,-Inf,123456.5\n"
+	want := "plain,\"a\"\"b\",\"a,b\",\"a\nb\",'=1+1,-5,'-x,'@cmd,+1,,'\t=1,' =1,'＝1,'＠x,0,0,0.1,1e-07,1e+21,,Inf,-Inf,123456.5\n"
 	if got := string(w.Bytes()); got != want {
 		t.Errorf("got  %q\nwant %q", got, want)
 	}
@@ -344,4 +344,27 @@ func BenchmarkRead(b *testing.B) {
 			}
 		}
 	})
+}
+
+// TestPackedBomb: a small file that unpacks to far more than any table is not
+// unpacked.
+func TestPackedBomb(t *testing.T) {
+	dir := t.TempDir()
+	var b bytes.Buffer
+	z := gzip.NewWriter(&b)
+	_, _ = z.Write([]byte("g,x\n"))
+	chunk := bytes.Repeat([]byte("a,1\n"), 1<<18)
+	for range 100 { // 100 MiB
+		_, _ = z.Write(chunk)
+	}
+	if err := z.Close(); err != nil {
+		t.Fatal(err)
+	}
+	if err := os.WriteFile(filepath.Join(dir, "d.csv.gz"), b.Bytes(), 0o666); err != nil {
+		t.Fatal(err)
+	}
+	src := Source{Name: "d", Root: dir, Pattern: "d.csv.gz", Decimal: '.', Columns: []Column{{Name: "g", Header: "g", Kind: expr.Text}, {Name: "x", Header: "x", Kind: expr.Number}}}
+	if _, err := Read(context.Background(), src, 1); err == nil || !strings.Contains(err.Error(), "unpacks from") {
+		t.Errorf("%v", err)
+	}
 }

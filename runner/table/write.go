@@ -71,10 +71,25 @@ func (w *Writer) Place(v float64, date bool) {
 	w.buf = append(w.buf, expr.FormatDate(v)...)
 }
 
+// formula tells whether a spreadsheet might take a text for a formula: by its
+// first character, in the full-width form too, behind blanks or not.
+func formula(s string) bool {
+	for _, r := range s {
+		switch r {
+		case '=', '+', '-', '@', '\t', '\r', '\n', '＝', '＋', '－', '＠':
+			return true
+		case ' ', '\u00a0', '\ufeff', '\u200b':
+			continue
+		}
+		return false
+	}
+	return false
+}
+
 // Text writes a cell of text.
 func (w *Writer) Text(s string) {
 	w.next()
-	if w.SafeCells && s != "" && strings.IndexByte("=+-@\t\r", s[0]) >= 0 {
+	if w.SafeCells && formula(s) {
 		if _, err := strconv.ParseFloat(s, 64); err != nil {
 			s = "'" + s
 		}

@@ -25,12 +25,19 @@ curve "ageing" {
   response = output
   along    = hours
   by       = [batch]
-  smoothness { rule = gcv }
+  smoothness {
+    rule = gcv
+  }
   reading "half" { crosses = limit }
 }
 guard "enough" {
+  on        = ageing
+  require   = n >= 8
+  otherwise = skip
+}
+guard "all" {
   on        = study
-  require   = share_droped < 0.1 # want: unknown quantity "share_droped" && did you mean "share_dropped"
+  require   = rows_red > 3 # want: rows_red && did you mean "rows_read"
   otherwise = warn
 }
 export "grid" {

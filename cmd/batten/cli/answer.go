@@ -15,41 +15,6 @@ import (
 	"batten/spec/expr"
 )
 
-func (e *env) accept() *cobra.Command {
-	var reason string
-	c := &cobra.Command{
-		Use:   "accept STUDY --reason TEXT",
-		Short: "Make the last run the ledger: the curves of record",
-		Long: `Accept writes the last run's fits to ledger/, one CSV a curve and study.json,
-small sorted text files to be kept in git. It refuses when spec or data have
-changed since that run, and when a guard refused.
-
-Who accepts is taken from BATTEN_WHO, else from git's user.name.`,
-		Example: `  batten accept study.hcl --reason "first full season, checked with the trial board"`,
-		Args:    cobra.ExactArgs(1),
-		RunE: func(c *cobra.Command, args []string) error {
-			s, err := load(args[0])
-			if err != nil {
-				return err
-			}
-			a, err := runner.Accept(c.Context(), s, reason, runner.Options{Progress: e.progress(), Program: version()})
-			if err != nil {
-				return err
-			}
-			if e.json {
-				return e.printJSON(a)
-			}
-			if !e.quiet {
-				fmt.Fprintf(e.out, "Accepted run %s: %s, by %s.\nThe ledger is in %s; commit it with the spec.\n",
-					a.Run, count(a.Fits, "fit", "fits"), a.Who, "ledger/")
-			}
-			return nil
-		},
-	}
-	c.Flags().StringVar(&reason, "reason", "", "why these curves are to stand (required)")
-	return c
-}
-
 func (e *env) graph() *cobra.Command {
 	var as string
 	c := &cobra.Command{

@@ -17,6 +17,7 @@ import (
 	"golang.org/x/term"
 
 	"batten/runner"
+	"batten/runner/signature"
 	"batten/spec"
 )
 
@@ -25,7 +26,7 @@ const (
 	Done    = 0 // done
 	Failed  = 1 // the program or the machine failed, or the run was stopped
 	Wrong   = 2 // the spec or the command line is wrong
-	BadData = 3 // the data are wrong, broke an expect, or a guard refused
+	BadData = 3 // the data are wrong, broke an expect, a guard refused, or the ledger is not sound
 	Differs = 4 // curves differ from the ledger (run --hold)
 )
 
@@ -64,15 +65,17 @@ func status(err error) int {
 		data     *runner.DataError
 		refused  *runner.RefusedError
 		moved    *runner.MovedError
+		key      *signature.KeyError
+		unsound  *runner.UnsoundError
 		missing  *runner.MissingInputsError
 		differs  *differsError
 	)
 	switch {
 	case err == nil:
 		return Done
-	case errors.As(err, &mistakes), errors.As(err, &usage), errors.As(err, &line):
+	case errors.As(err, &mistakes), errors.As(err, &usage), errors.As(err, &line), errors.As(err, &key):
 		return Wrong
-	case errors.As(err, &data), errors.As(err, &refused), errors.As(err, &missing):
+	case errors.As(err, &data), errors.As(err, &refused), errors.As(err, &unsound), errors.As(err, &missing):
 		return BadData
 	case errors.As(err, &moved), errors.As(err, &differs):
 		return Differs
@@ -146,7 +149,7 @@ STUDY is a spec file, or a folder that holds study.hcl.`,
 	})
 	root.PersistentFlags().BoolVar(&e.json, "json", false, "print the answer as JSON")
 	root.PersistentFlags().BoolVarP(&e.quiet, "quiet", "q", false, "no progress, no table: only what went wrong")
-	root.AddCommand(e.check(), e.run(), e.why(), e.read(), e.accept(), e.graph(), e.compare(), e.replay(), e.sweep())
+	root.AddCommand(e.check(), e.run(), e.why(), e.read(), e.accept(), e.graph(), e.compare(), e.replay(), e.sweep(), e.record())
 	root.CompletionOptions.HiddenDefaultCmd = false
 	for _, c := range root.Commands() {
 		wrapArgs(c)

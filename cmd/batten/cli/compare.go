@@ -2,6 +2,7 @@ package cli
 
 import (
 	"fmt"
+	"math"
 	"strings"
 
 	"github.com/spf13/cobra"
@@ -117,7 +118,19 @@ func rowsChanged(r *runner.RowChange) string {
 
 func valueText(v ledger.Value, q *runner.ReadingChange) string {
 	if q.IsDate {
-		return expr.FormatDate(v.Value)
+		day := func(v float64) string {
+			switch {
+			case math.IsNaN(v):
+				return "none"
+			case math.IsInf(v, 0):
+				return "open"
+			}
+			return expr.FormatDate(math.Round(v))
+		}
+		if math.IsNaN(v.Value) {
+			return "none"
+		}
+		return fmt.Sprintf("%s [%s, %s]", day(v.Value), day(v.Lower), day(v.Upper))
 	}
 	val, lo, hi := reports.Rounded(v.Value, v.Lower, v.Upper)
 	s := val

@@ -11,16 +11,30 @@ import (
 )
 
 func (e *env) check() *cobra.Command {
-	return &cobra.Command{
+	var onLedger bool
+	var signers string
+	c := &cobra.Command{
 		Use:   "check STUDY",
 		Short: "Read the spec and the heads of its inputs; say every mistake; fit nothing",
+		Long: `Check reads the spec and the heads of its inputs, and says every mistake.
+
+With --ledger it looks at the accepted curves instead: whether every file in
+ledger/ is the one that was accepted, which lines were edited since, and whether
+the signature, where there is one, is by an allowed signer.`,
 		Example: `  batten check study.hcl
-  batten check examples/pears`,
+  batten check examples/pears
+  batten check study.hcl --ledger --signers ~/.ssh/allowed_signers`,
 		Args: cobra.ExactArgs(1),
 		RunE: func(c *cobra.Command, args []string) error {
 			s, err := load(args[0])
 			if err != nil {
 				return err
+			}
+			if onLedger {
+				return e.checkLedger(s, signers)
+			}
+			if signers != "" {
+				return linef("--signers is for check --ledger")
 			}
 			files, err := runner.Check(c.Context(), s)
 			if err != nil {
@@ -36,6 +50,9 @@ func (e *env) check() *cobra.Command {
 			return nil
 		},
 	}
+	c.Flags().BoolVar(&onLedger, "ledger", false, "hold the accepted curves to their digests and signature")
+	c.Flags().StringVar(&signers, "signers", "", "a list of allowed signers (default: ledger/allowed_signers)")
+	return c
 }
 
 func count(n int, one, many string) string {

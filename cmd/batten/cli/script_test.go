@@ -3,6 +3,10 @@ package cli
 import (
 	"bytes"
 	"context"
+	"crypto/ed25519"
+	"crypto/rand"
+	"encoding/pem"
+	"fmt"
 	"io/fs"
 	"os"
 	"os/signal"
@@ -12,6 +16,7 @@ import (
 	"testing"
 
 	"github.com/rogpeppe/go-internal/testscript"
+	"golang.org/x/crypto/ssh"
 )
 
 const top = "../../.."
@@ -41,6 +46,37 @@ func TestScripts(t *testing.T) {
 			return nil
 		},
 		Cmds: map[string]func(*testscript.TestScript, bool, []string){
+			// newkey FILE [PASSPHRASE]: an SSH key made anew, its public half in FILE.pub
+			"newkey": func(ts *testscript.TestScript, _ bool, args []string) {
+				_, private, err := ed25519.GenerateKey(rand.Reader)
+				ts.Check(err)
+				block, err := ssh.MarshalPrivateKey(private, "")
+				if len(args) > 1 {
+					block, err = ssh.MarshalPrivateKeyWithPassphrase(private, "", []byte(args[1]))
+				}
+				ts.Check(err)
+				public, err := ssh.NewPublicKey(private.Public())
+				ts.Check(err)
+				ts.Check(os.WriteFile(ts.MkAbs(args[0]), pem.EncodeToMemory(block), 0o600))
+				ts.Check(os.WriteFile(ts.MkAbs(args[0]+".pub"), ssh.MarshalAuthorizedKey(public), 0o600))
+			},
+			// signers LIST PRINCIPAL PUBLIC: adds a line to a list of allowed signers
+			"signers": func(ts *testscript.TestScript, _ bool, args []string) {
+				f, err := os.OpenFile(ts.MkAbs(args[0]), os.O_APPEND|os.O_CREATE|os.O_WRONLY, 0o666)
+				ts.Check(err)
+				_, err = fmt.Fprintf(f, "%s namespaces=\"batten-ledger\" %s", args[1], ts.ReadFile(args[2]))
+				ts.Check(err)
+				ts.Check(f.Close())
+			},
+			// replace OLD NEW FILE: puts one text in the place of another, once
+			"replace": func(ts *testscript.TestScript, _ bool, args []string) {
+				old := ts.ReadFile(args[2])
+				now := strings.Replace(old, args[0], args[1], 1)
+				if now == old {
+					ts.Fatalf("%s holds no %q", args[2], args[0])
+				}
+				ts.Check(os.WriteFile(ts.MkAbs(args[2]), []byte(now), 0o666))
+			},
 			// exits N cmd...: the command must end with that very status
 			"exits": func(ts *testscript.TestScript, _ bool, args []string) {
 				want, err := strconv.Atoi(args[0])

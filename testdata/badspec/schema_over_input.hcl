@@ -3,7 +3,7 @@ study {
 }
 let { limit = 70 }
 input "lamps" {
-  file    = "lamps.csv"
+  file    = "data/*.json"
   columns = {
     batch  = text
     hours  = number("h")
@@ -29,13 +29,13 @@ curve "ageing" {
   reading "half" { crosses = limit }
 }
 guard "enough" {
-  on        = study
-  require   = fits > 3
-  otherwise = skip # want: skip for a guard on the study
+  on        = ageing
+  require   = n >= 8
+  otherwise = skip
 }
 export "grid" {
-  of   = ageing
-  what = grid
-  file = "out/grid.csv"
+  of     = ageing
+  what   = grid
+  file   = "data/grid.csv" # want: the file "data/grid.schema.json", which input "lamps" would read in the next run
+  schema = true
 }
-report "page" { files = ["out/page.html"] }
