@@ -17,7 +17,7 @@ type Document struct {
 	Dated     string // ISO date, or "" (then no date is printed)
 	Curves    []Curve
 	Contrasts []Contrast
-	Guards    []Guard // on contrasts, inputs and the study; Outcome is set
+	Guards    []Guard // on contrasts, inputs and the study; those on curves stand with their curve
 	Record    Record
 	Summary   Summary
 }
@@ -92,8 +92,9 @@ type Exception struct {
 // Guard is a condition with how it went.
 type Guard struct {
 	Name, Require, Otherwise, Reason string
-	On, Outcome                      string   // of a guard on no curve: what it stands on, and held, warn or refuse
-	Failed                           []string // group labels; what was found
+	On                               string
+	Judged                           int      // fits or pairs; 1 for an input or the study
+	Failed                           []string // what it does not hold for, each with what was found
 }
 
 // Skipped is a group without a fit.

@@ -300,8 +300,11 @@ func extent(fits []*Fit) (lo, hi [2]float64) {
 // the band excludes zero the axis is marked.
 func contrastFigure(c *Contrast, p *Pair, t theme) []byte {
 	y := clean(c.Y)
-	y.Name = clip(c.Minus[0], 16) + " less " + clip(c.Minus[1], 16)
+	y.Name = "difference" // of what, the text above says: names may be long
 	fig := frame(clean(c.X), y)
+	if c.X.Date { // their labels are wide
+		fig.X.Tick.Marker = few{fig.X.Tick.Marker}
+	}
 	curves(fig, p.Grid, 1.5)
 	fig.Y.Min, fig.Y.Max = math.Min(fig.Y.Min, 0), math.Max(fig.Y.Max, 0)
 	room(fig)

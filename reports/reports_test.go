@@ -27,7 +27,7 @@ func document() *Document {
 		Weight: "fruit", Rule: "gcv", Level: 0.95, BandFor: "the curve",
 		Rows:       RowCount{Read: 30, Used: 24, ZeroWeight: 1, Dropped: []Count{{"bruised", "bruised fruit", 3}}, SetAside: []Count{{"firmness", "firmness is missing", 2}}},
 		Exceptions: []Exception{{"pilot", `cultivar == "Pilot"`, "fixed_df, df = 4", "four visits only", []string{"cultivar=B, store=air"}}},
-		Guards:     []Guard{{Name: "enough", Require: "n >= 8", Otherwise: "skip", Reason: "too few", Failed: []string{"cultivar=C, store=air"}}},
+		Guards:     []Guard{{Name: "enough", On: "firmness", Require: "n >= 8", Otherwise: "skip", Reason: "too few", Judged: 3, Failed: []string{"cultivar=C, store=air (n = 3)"}}},
 		Readings:   []string{"release", "peak"},
 		Skipped:    []Skipped{{Group: "cultivar=C, store=air", N: 3, Distinct: 2, Why: "2 distinct x, a curve needs 3"}},
 	}
@@ -62,6 +62,12 @@ func document() *Document {
 		Contrasts: []Contrast{{Name: "store_effect", Of: "firmness", Across: "store", Minus: [2]string{"air", "low"}, X: c.X, Y: c.Y, Level: 0.95,
 			Pairs:   []Pair{{Group: "cultivar=A", Grid: c.Fits[0].Grid, SurelyNot: [][2]float64{{0, 40}}}},
 			Missing: []string{"cultivar=B: there is no fit for store=low"}}},
+		Guards: []Guard{
+			{Name: "whole season", On: "input readings", Require: "files == 2", Otherwise: "refuse", Judged: 1},
+			{Name: "few drops", On: "the study", Require: "share_dropped < 0.05", Otherwise: "warn", Reason: "ask the\nfield team", Judged: 1, Failed: []string{"share_dropped = 0.1"}},
+			{Name: "stores differ", On: "contrast store_effect", Require: "p_none < 0.01", Otherwise: "refuse", Judged: 1, Failed: []string{"store_effect[cultivar=A] (p_none = 0.2)"}},
+			{Name: "no pairs", On: "contrast store_effect", Require: "largest > 0", Otherwise: "warn"},
+		},
 		Record: Record{Program: "batten 0.1.0", Go: "go1.26", Spec: File{"study.hcl", strings.Repeat("ab", 32), 900, 0},
 			Inputs: []File{{"data/a.csv", strings.Repeat("cd", 32), 4000, 30}}, Seed: 7, Run: "3f9ac2", Methods: []string{"spline 1"}},
 		Summary: Summary{Total: 3, Fitted: 2, Skipped: 1, Ledger: "accepted 2026-02-01 by A. Analyst: first",

@@ -71,9 +71,9 @@ func Terminal(w io.Writer, d *Document, opt TerminalOptions) {
 			fmt.Fprintln(w, on+wrapText(fmt.Sprintf("%s %s: %s", word, s.Group, s.Why), opt.Width, "    ")+off)
 		}
 	}
-	for _, g := range d.Guards {
-		if g.Outcome != "held" {
-			fmt.Fprintln(w, alarm+wrapText(fmt.Sprintf("guard %q on %s (%s): %s does not hold: %s", g.Name, g.On, g.Outcome, g.Require, some(g.Failed)), opt.Width, "  ")+plain)
+	for i := range d.Guards {
+		if g := &d.Guards[i]; len(g.Failed) > 0 {
+			fmt.Fprintln(w, alarm+wrapText(guardLine(g), opt.Width, "    ")+plain)
 		}
 	}
 	fmt.Fprintln(w)

@@ -32,11 +32,11 @@ type curveFits struct {
 	fits    []*storedFit
 	values  [][]value // of fits[i]
 	by      []string
-	seed    int64                   // of draws from a posterior
-	reused  []bool                  // of fits[i]: it came from the store
-	verdict []verdict               // of fits[i]; set by judge
-	taken   map[string]*expr.Column // readings, one row a fit, where a guard names them
-	tests   map[string]testedPairs  // of contrasts
+	seed    int64                  // of draws from a posterior
+	reused  []bool                 // of fits[i]: it came from the store
+	verdict []verdict              // of fits[i]; set by judge
+	guards  []GuardRecord          // how the guards on the curve went; set by judge
+	tests   map[string]testedPairs // of contrasts
 }
 
 // manifest is what the store keeps of a curve: its parts and row counts.

@@ -29,20 +29,19 @@ type wants struct{ grid, readings bool }
 
 // derive opens a stored fit and takes from it what is wanted. The result
 // stands until the worker's next fit.
-func (ft *fitter) derive(cf *curveFits, i int, want wants) (*derived, error) {
-	c, f, v := cf.def, cf.fits[i], cf.verdict[i]
+func (ft *fitter) derive(cf *curveFits, k int, want wants) (*derived, error) {
+	c, f, v := cf.def, cf.fits[k], cf.verdict[k]
 	fit, err := ft.open(f)
 	if err != nil {
 		return nil, err
 	}
 	d := &derived{fit: fit, flags: flagsOf(c, f, v)}
-	lo, hi := fit.Knots[0], fit.Knots[len(fit.Knots)-1]
 	if want.grid {
-		xs, err := gridOf(&c.Grid, lo, hi)
+		xs, err := gridOf(&c.Grid, fit.Knots[0], fit.Knots[len(fit.Knots)-1])
 		if err != nil {
 			return nil, err
 		}
-		b, err := band(cf, i, fit)
+		b, err := band(cf, k, fit)
 		if err != nil {
 			return nil, err
 		}
@@ -50,20 +49,29 @@ func (ft *fitter) derive(cf *curveFits, i int, want wants) (*derived, error) {
 	}
 	if want.readings {
 		for i := range c.Readings {
-			r := &c.Readings[i]
-			a := reading.Ask{Kind: r.Kind, At: r.At, Direction: r.Direction, All: r.All, From: r.From, To: r.To}
-			if r.Kind == spec.Surely || r.Kind == spec.Steepest || c.Order == 1 && (r.Kind == spec.Maximum || r.Kind == spec.Minimum) {
-				if a.Grid, err = gridOf(&c.Grid, lo, hi); err != nil {
-					return nil, err
-				}
-				a.Seed, a.Group = cf.seed, fitName(c.Name.Text, label(byNames(c), f.Group))
+			taken, err := takeReading(cf, k, fit, &c.Readings[i])
+			if err != nil {
+				return nil, err
 			}
-			for _, res := range reading.Take(fit, c.Band.Level, a) {
-				d.readings = append(d.readings, namedReading{r, res})
+			for _, res := range taken {
+				d.readings = append(d.readings, namedReading{&c.Readings[i], res})
 			}
 		}
 	}
 	return d, nil
+}
+
+// takeReading takes one reading from fit k of a curve.
+func takeReading(cf *curveFits, k int, fit *spline.Fit, r *spec.Reading) (taken []reading.Result, err error) {
+	c := cf.def
+	a := reading.Ask{Kind: r.Kind, At: r.At, Direction: r.Direction, All: r.All, From: r.From, To: r.To}
+	if r.Kind == spec.Surely || r.Kind == spec.Steepest || c.Order == 1 && (r.Kind == spec.Maximum || r.Kind == spec.Minimum) {
+		if a.Grid, err = gridOf(&c.Grid, fit.Knots[0], fit.Knots[len(fit.Knots)-1]); err != nil {
+			return nil, err
+		}
+		a.Seed, a.Group = cf.seed, fitName(c.Name.Text, label(byNames(c), cf.fits[k].Group))
+	}
+	return reading.Take(fit, c.Band.Level, a), nil
 }
 
 // flagsOf lists a fit's flags: those of its choice and residuals, whether

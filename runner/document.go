@@ -60,13 +60,21 @@ func (r *Run) Document(ctx context.Context, title string, show []string, brief b
 		d.Contrasts = append(d.Contrasts, *doc)
 	}
 	for _, g := range r.Record.Guards {
-		otherwise := ""
-		for _, def := range s.Guards {
-			if def.Name.Text == g.Guard {
-				otherwise = def.Otherwise
-			}
+		if g.Kind == spec.OnCurve {
+			continue
 		}
-		d.Guards = append(d.Guards, reports.Guard{Name: g.Guard, On: g.On, Require: g.Require, Otherwise: otherwise, Reason: g.Reason, Outcome: g.Outcome, Failed: g.Failed})
+		x := reports.Guard{Name: g.Guard, On: g.Kind + " " + g.On, Require: g.Require, Otherwise: g.Otherwise, Reason: g.Reason, Judged: g.Judged}
+		if g.Kind == spec.OnStudy {
+			x.On = "the study"
+		}
+		for _, f := range g.Failed {
+			of := f.Of
+			if g.Kind != spec.OnContrast {
+				of = "" // On says it
+			}
+			x.Failed = append(x.Failed, failureText(of, f))
+		}
+		d.Guards = append(d.Guards, x)
 	}
 	for _, m := range r.Record.Moved {
 		d.Summary.Moved = append(d.Summary.Moved, reports.Move{
@@ -132,16 +140,13 @@ func (r *Run) curveDocument(ctx context.Context, c *spec.Curve, brief bool) (*re
 	if c.Weight != nil {
 		out.Weight = c.Weight.Name.Text
 	}
-	left := cf.count.Read
 	for _, d := range cf.count.Dropped {
 		out.Rows.Dropped = append(out.Rows.Dropped, reports.Count{Label: d.Label, Reason: d.Reason, N: d.N})
-		left -= d.N
 	}
 	for _, a := range cf.aside {
 		out.Rows.SetAside = append(out.Rows.SetAside, reports.Count{Label: a.Column, Reason: a.Column + " is missing", N: a.N})
-		left -= a.N
 	}
-	out.Rows.Used = left - cf.zero
+	out.Rows.Used = cf.used()
 	for _, rd := range c.Readings {
 		out.Readings = append(out.Readings, rd.Name.Text)
 	}
@@ -204,22 +209,36 @@ func (r *Run) rules(cf *curveFits, out *reports.Curve) {
 		}
 		out.Exceptions = append(out.Exceptions, x)
 	}
-	for _, g := range r.Study.Guards {
-		if g.On != cf.def.Name.Text {
-			continue
-		}
-		x := reports.Guard{Name: g.Name.Text, Require: g.Source, Otherwise: g.Otherwise, Reason: g.Reason}
-		for i, f := range cf.fits {
-			failed := cf.verdict[i].Guard == g.Name.Text
-			for _, w := range cf.verdict[i].Warned {
-				failed = failed || w == g.Name.Text
-			}
-			if failed {
-				x.Failed = append(x.Failed, label(cf.by, f.Group))
+	labels := map[string]string{}
+	for _, f := range cf.fits {
+		l := label(cf.by, f.Group)
+		labels[fitName(cf.def.Name.Text, l)] = l
+	}
+	for _, g := range cf.guards {
+		x := reports.Guard{Name: g.Guard, On: g.On, Require: g.Require, Otherwise: g.Otherwise, Reason: g.Reason, Judged: g.Judged}
+		for _, f := range g.Failed {
+			if l, ok := labels[f.Of]; ok {
+				x.Failed = append(x.Failed, failureText(l, f))
 			}
 		}
 		out.Guards = append(out.Guards, x)
 	}
+}
+
+// failureText names what a guard's condition does not hold for, and what was
+// found there.
+func failureText(of string, f GuardFailure) string {
+	found := f.Found
+	if f.Missing {
+		found = strings.TrimPrefix(found+"; a missing value counts as not holding", "; ")
+	}
+	switch {
+	case found == "":
+		return of
+	case of == "":
+		return found
+	}
+	return of + " (" + found + ")"
 }
 
 // ruleText writes a rule in the words of the spec.

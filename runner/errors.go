@@ -21,16 +21,16 @@ func (e *DataError) Error() string {
 	return s
 }
 
-// RefusedError says that a guard refused fits. The run has its record, but
+// RefusedError says that guards refused. The run has its record, but
 // exports and reports were left as they were.
 type RefusedError struct {
 	Run     string
-	Refused []string // fits, each with the guard and its reason
+	Refused []string // fits, pairs, inputs, the study: each with the guard and its reason
 }
 
 func (e *RefusedError) Error() string {
-	return fmt.Sprintf("%s refused by a guard; exports and reports were left as they were:\n  %s",
-		plural(len(e.Refused), "fit", "fits"), strings.Join(e.Refused, "\n  "))
+	return fmt.Sprintf("%s; exports and reports were left as they were:\n  %s",
+		plural(len(e.Refused), "refusal by a guard", "refusals by guards"), strings.Join(e.Refused, "\n  "))
 }
 
 // MovedError says that fits differ from the ledger where the caller asked

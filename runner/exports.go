@@ -23,7 +23,7 @@ const exportVersion = 1
 // exportKey describes all that an export's bytes depend on.
 func (r *Run) exportKey(e *spec.Export) string {
 	k := newKey("export", exportVersion)
-	k.add("what", e.What)
+	k.add("what", e.What, e.SafeCells)
 	of := e.Of
 	if c := r.Study.ContrastByName(e.Of); c != nil {
 		of = c.Of
@@ -66,10 +66,10 @@ func (r *Run) exportKey(e *spec.Export) string {
 // export writes one export.
 func (r *Run) export(ctx context.Context, e *spec.Export, out io.Writer) error {
 	if c := r.Study.ContrastByName(e.Of); c != nil {
-		return r.exportContrast(c, e.What, out)
+		return r.exportContrast(c, e, out)
 	}
 	cf := r.curves[e.Of]
-	x := &exporter{cf: cf, what: e.What}
+	x := &exporter{cf: cf, what: e.What, safe: e.SafeCells}
 	if e.What == spec.ExportResiduals {
 		if err := r.findLines(ctx, x); err != nil {
 			return err
@@ -85,6 +85,7 @@ func (r *Run) export(ctx context.Context, e *spec.Export, out io.Writer) error {
 type exporter struct {
 	cf    *curveFits
 	what  string
+	safe  bool                  // cells of text cannot be taken for formulas
 	lines map[string][]rowPlace // of residuals: the rows of each group
 }
 
@@ -129,7 +130,7 @@ func (x *exporter) write(ctx context.Context, out io.Writer, workers int) error 
 	eg, ctx := errgroup.WithContext(ctx)
 	free := make(chan struct{}, 4*max(1, workers)) // how far formatting may run ahead of writing
 	overBlocks(ctx, eg, n, workers, free, func(ft *fitter, i int) error {
-		w := &table.Writer{SafeCells: true}
+		w := &table.Writer{SafeCells: x.safe}
 		for k := i * block; k < min((i+1)*block, len(x.cf.fits)); k++ {
 			if !x.cf.verdict[k].fits() {
 				continue
@@ -356,7 +357,8 @@ func (r *Run) findLines(ctx context.Context, x *exporter) error {
 }
 
 // exportContrast writes a contrast's differences on their grid, or its tests.
-func (r *Run) exportContrast(c *spec.Contrast, what string, out io.Writer) error {
+func (r *Run) exportContrast(c *spec.Contrast, e *spec.Export, out io.Writer) error {
+	what := e.What
 	cf := r.curves[c.Of]
 	var names []string
 	for _, b := range cf.by {
@@ -377,7 +379,7 @@ func (r *Run) exportContrast(c *spec.Contrast, what string, out io.Writer) error
 		return err
 	}
 	date := cf.def.Along.Kind == expr.Date
-	w := table.Writer{SafeCells: true}
+	w := table.Writer{SafeCells: e.SafeCells}
 	for _, p := range pairs {
 		begin := func() {
 			for _, v := range p.values {

@@ -64,7 +64,9 @@ curve "c" {
 			one.fits = append(one.fits, fit)
 			one.values = append(one.values, []value{{text: fit.Group[0]}})
 		}
-		judge(s, one)
+		if err := judge(context.Background(), s, one, 1); err != nil {
+			return
+		}
 		ft := &fitter{}
 		for i := range one.fits {
 			if one.verdict[i].fits() {

@@ -211,7 +211,7 @@ func fileDigest(name string) (string, int64, error) {
 }
 
 // reportVersion is raised when a report's bytes change for the same results.
-const reportVersion = 1
+const reportVersion = 2
 
 // writeReport writes a report's files, and figures beside a Markdown one.
 func (r *Run) writeReport(ctx context.Context, st *store.Store, rep *spec.Report) error {

@@ -37,9 +37,9 @@ type Record struct {
 	Moved    []Move        `json:"moved"`
 	Ledger   string        `json:"ledger,omitempty"` // the acceptance that Moved is against, in a line
 	Dated    string        `json:"dated,omitempty"`  // the day that reports bear
-	Guards   []GuardResult `json:"guards,omitempty"` // those on contrasts, inputs and the study
 	Outputs  []Output      `json:"outputs"`
 	Refused  []string      `json:"refused,omitempty"`
+	Guards   []GuardRecord `json:"guards,omitempty"` // every guard's result, in the order of the spec
 
 	Who     string              `json:"who,omitempty"`     // who ran it, where known
 	Against []FileRecord        `json:"against,omitempty"` // the ledger's files that it was compared with

@@ -19,7 +19,6 @@ import (
 	"os"
 	"path/filepath"
 	"runtime"
-	"strings"
 	"sync/atomic"
 	"time"
 
@@ -108,13 +107,20 @@ func Execute(ctx context.Context, s *spec.Study, opt Options) (*Run, error) {
 		if err != nil {
 			return nil, err
 		}
-		judge(s, cf)
+		if err := judge(ctx, s, cf, opt.Workers); err != nil {
+			return nil, err
+		}
 		r.curves[c.Name.Text] = cf
 	}
 	if err := r.sameInputs(); err != nil {
 		return nil, err
 	}
 	r.Record = r.record(started)
+	guards, whole, err := r.judgeWhole()
+	if err != nil {
+		return nil, err
+	}
+	r.Record.Guards, r.Record.Refused = guards, append(r.Record.Refused, whole...)
 	if then := opt.again; then != nil {
 		r.Record.Moved, r.Record.Ledger, r.Record.Dated, r.Record.Against = then.Moved, then.Ledger, then.Dated, then.Against
 	} else {
@@ -125,9 +131,6 @@ func Execute(ctx context.Context, s *spec.Study, opt Options) (*Run, error) {
 		if err := r.findMoved(ctx); err != nil {
 			return nil, err
 		}
-	}
-	if err := r.judgeWhole(); err != nil {
-		return nil, err
 	}
 	r.Record.Results = r.results()
 	var refused error
@@ -265,7 +268,13 @@ func (r *Run) results() string {
 		}
 	}
 	for _, g := range r.Record.Guards {
-		k.add("guard", g.Guard, g.Outcome, strings.Join(g.Failed, "; "))
+		if g.Kind == spec.OnCurve {
+			continue // verdicts say it
+		}
+		k.add("guard", g.Guard, g.Judged)
+		for _, f := range g.Failed {
+			k.add("failed", f.Of, f.Found)
+		}
 	}
 	return k.digest()
 }

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"io"
 	"path/filepath"
+	"runtime"
 	"sort"
 	"strings"
 
@@ -99,7 +100,9 @@ func (r *Recorded) curve(name string) (*curveFits, error) {
 		if err != nil {
 			return nil, fmt.Errorf("the fits of run %s cannot be read (%w); run the study again: batten run %s", r.Record.Run, err, r.Study.Dir)
 		}
-		judge(r.Study, cf)
+		if err := judge(context.Background(), r.Study, cf, runtime.GOMAXPROCS(0)); err != nil {
+			return nil, err
+		}
 		return cf, nil
 	}
 	return nil, fmt.Errorf("the record of run %s lacks curve %q", r.Record.Run, name)
@@ -212,7 +215,7 @@ func (r *Recorded) Why(ctx context.Context, curve string, match []Match) (*Answe
 	i := at[0]
 	f := cf.fits[i]
 	one := &curveFits{def: cf.def, digest: cf.digest, count: cf.count, aside: cf.aside, zero: cf.zero, by: cf.by, seed: cf.seed,
-		fits: cf.fits[i : i+1], values: cf.values[i : i+1], verdict: cf.verdict[i : i+1]}
+		fits: cf.fits[i : i+1], values: cf.values[i : i+1], verdict: cf.verdict[i : i+1], guards: cf.guards}
 	run.curves[curve] = one
 	run.opt.fill()
 	doc, err := run.curveDocument(ctx, cf.def, false)
@@ -231,7 +234,7 @@ func (r *Recorded) Why(ctx context.Context, curve string, match []Match) (*Answe
 	a.History = ruleHistory(ctx, r.Study, curve, f.Exception, r.Record.Inputs)
 	a.Lines, a.LinesNote = r.fitLines(ctx, cf, f.Group)
 	a.trace = func(w io.Writer) error {
-		x := &exporter{cf: one, what: spec.ExportEvidence}
+		x := &exporter{cf: one, what: spec.ExportEvidence, safe: true}
 		if err := table.Header(w, append(append([]string(nil), one.by...), x.columns()...)); err != nil {
 			return err
 		}

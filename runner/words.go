@@ -106,6 +106,9 @@ func flagText(name string, v verdict) string {
 		return "A reading or the grid lies beyond the data. The curve goes on there by assumption (constant, straight or as a parabola, by its order), and the band widens; nothing observed supports it."
 	}
 	if g, ok := strings.CutPrefix(name, "guard "); ok {
+		if slices.Contains(v.Untold, g) {
+			return fmt.Sprintf("The guard %q warns: its condition has no value for this fit, for something it names is missing; that counts as not holding.", g)
+		}
 		return fmt.Sprintf("The guard %q warns: its condition does not hold for this fit.", g)
 	}
 	return name

@@ -76,6 +76,8 @@ func (r *reader) curve(b *block, name Name, kinds map[string]string) {
 		r.identifier(names[i], "reading")
 		if q, ok := r.reading(k, names[i], date); ok && r.suits(k, &q, c.Order) {
 			c.Readings = append(c.Readings, q)
+		} else {
+			r.badReadings[name.Text] = append(r.badReadings[name.Text], names[i].Text)
 		}
 	}
 	c.Tolerance = Tolerance{HalfWidths: 0.25}
@@ -209,73 +211,6 @@ func (r *reader) rule(b *block, c *Curve, cols []Column) Rule {
 		r.fail(b.attrs["df_at_most"].Expr.Range(), fmt.Sprintf("df_at_most = %g", out.DFAtMost), "expected more than df_at_least (%g where it is not given)", low)
 	}
 	return out
-}
-
-// sigma reads the known standard deviation of a row: a number, of a row of
-// weight 1, or a column, which then settles the weights.
-func (r *reader) sigma(b *block, c *Curve, cols []Column, out *Rule) {
-	a := b.take("sigma", true)
-	if a == nil {
-		return
-	}
-	t, bare := a.Expr.(*hclsyntax.ScopeTraversalExpr)
-	if _, constant := r.consts[rootName(t)]; !bare || constant {
-		v, ok := r.numberOf(a.Expr, "a standard deviation as a number above 0, or a column of them")
-		if ok && !(v > 0) {
-			r.fail(a.Expr.Range(), fmt.Sprintf("sigma = %g", v), "expected more than 0")
-		}
-		out.Sigma = v
-		return
-	}
-	n, ok := r.wordOf(a.Expr, "a number or a column")
-	if !ok {
-		return
-	}
-	x := r.column(n, cols)
-	if x == nil {
-		return
-	}
-	switch {
-	case x.Kind != expr.Number:
-		r.fail(n.Range, fmt.Sprintf("the column %q is %s", n.Text, x.Kind), "expected number")
-	case c.Weight != nil:
-		r.fail(n.Range, fmt.Sprintf("sigma = %s beside a weight", n.Text), "expected one of them: with a column of standard deviations every row weighs 1/sigma^2")
-	case c.Sigma != nil && c.Sigma.Name.Text != n.Text:
-		r.fail(n.Range, fmt.Sprintf("a second column of sigma, %q beside %q", n.Text, c.Sigma.Name.Text), "expected the same one in all rules of a curve, for it settles the weights")
-	default:
-		col := *x
-		col.Name.Range = n.Range
-		c.Sigma = &col
-	}
-	out.Sigma = 1
-}
-
-func rootName(t *hclsyntax.ScopeTraversalExpr) string {
-	if t == nil {
-		return ""
-	}
-	return t.Traversal.RootName()
-}
-
-// shared reads what the groups share: true stands for lambda.
-func (r *reader) shared(b *block) string {
-	a := b.take("shared", false)
-	if a == nil {
-		return ""
-	}
-	if l, ok := a.Expr.(*hclsyntax.LiteralValueExpr); ok {
-		switch describe(l.Val) {
-		case "true":
-			return SharedLambda
-		case "false":
-			return ""
-		}
-	}
-	n, ok := r.wordOf(a.Expr, "true, lambda or edf")
-	if ok && n.Text != SharedLambda && n.Text != SharedEDF {
-		r.fail(n.Range, fmt.Sprintf("shared = %s", n.Text), "expected true, lambda or edf%s", expr.Suggest(n.Text, []string{SharedLambda, SharedEDF}))
-	}
-	return n.Text
 }
 
 func (r *reader) band(b *block, out *Band) {

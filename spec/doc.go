@@ -122,12 +122,13 @@
 //
 //	guard "NAME" {
 //	  on        = CURVE, CONTRAST, INPUT or study   required
-//	  require   = CONDITION      required. On a curve over FitNumbers, FitFlags, the by columns
-//	                             and readings: NAME, NAME_lower, NAME_upper, of an extreme
-//	                             NAME_at; on a contrast over ContrastNumbers and the by columns
-//	                             that remain; on an input over InputNumbers, on the study over
-//	                             StudyNumbers. What is missing does not hold
-//	  otherwise = warn, skip or refuse   required; skip on curves only
+//	  require   = CONDITION      required, over what it stands on:
+//	                             a curve's fits: FitNumbers, FitFlags, the by columns, and of each
+//	                             reading NAME, NAME_lower, NAME_upper, of an extreme also NAME_at;
+//	                             a contrast's pairs: PairNumbers and the by columns that remain;
+//	                             an input: InputNumbers; the study: StudyNumbers, of all curves
+//	                             together. A condition that is missing does not hold
+//	  otherwise = warn, skip or refuse   required; skip only on a curve
 //	  reason    = TEXT
 //	}
 //
@@ -135,6 +136,8 @@
 //	  of   = CURVE or CONTRAST   required
 //	  what = grid, fits, readings, evidence, residuals or coefficients   required; of a contrast grid or tests
 //	  file = PATH                required, ending in .csv, under the study's folder
+//	  safe_cells = BOOL          default true: text that a spreadsheet would take for a
+//	                             formula gets a leading apostrophe
 //	  schema = BOOL              write a Table Schema beside it, FILE with .schema.json for .csv
 //	}
 //

@@ -64,7 +64,7 @@ func Parse(file, dir string, text []byte) (*Study, error) {
 		return nil, m
 	}
 	s.Text = body
-	r := &reader{study: s, consts: map[string]cty.Value{}, broken: map[string]bool{}}
+	r := &reader{study: s, consts: map[string]cty.Value{}, broken: map[string]bool{}, badReadings: map[string][]string{}}
 	r.mistakes.File, r.mistakes.Text = file, body
 	f, diags := hclsyntax.ParseConfig(body, file, hcl.InitialPos)
 	for _, d := range diags {

@@ -73,13 +73,6 @@ func (r *reader) contrast(b *block, name Name, kinds map[string]string) {
 	b.finish()
 }
 
-// FitNumbers and FitFlags are what a guard's condition may name beside the by
-// columns.
-var (
-	FitNumbers = []string{"n", "distinct", "edf", "lambda", "rss", "sigma", "gcv", "loocv", "reml", "aicc", "score"}
-	FitFlags   = []string{"at_bound", "straight_line", "constant", "parabola", "target_unreached", "several_minima", "autocorrelated", "high_leverage", "few_distinct", "extrapolated"}
-)
-
 var exportKinds = []string{ExportGrid, ExportFits, ExportReadings, ExportEvidence, ExportResiduals, ExportCoefficients, ExportTests}
 
 func (r *reader) export(b *block, name Name, kinds map[string]string) {
@@ -110,6 +103,9 @@ func (r *reader) export(b *block, name Name, kinds map[string]string) {
 		}
 	}
 	e.Schema = b.flag("schema")
+	if e.SafeCells = true; b.take("safe_cells", false) != nil {
+		e.SafeCells = b.flag("safe_cells")
+	}
 	b.finish()
 }
 

@@ -20,6 +20,8 @@ type reader struct {
 	mistakes Mistakes
 	consts   map[string]cty.Value
 	broken   map[string]bool // rows whose columns cannot be known: what uses them is not reported
+
+	badReadings map[string][]string // of a curve: readings that could not be read
 }
 
 func (r *reader) fail(at hcl.Range, found, expected string, a ...any) {
@@ -306,11 +308,16 @@ func (b *block) texts(name string, required bool, what string) (out []string, at
 
 // program compiles an argument over columns.
 func (b *block) program(name string, required bool, columns map[string]expr.Kind, want expr.Kind) *expr.Program {
+	return b.programOver("column", name, required, columns, want)
+}
+
+// programOver compiles an argument over things of another noun than columns.
+func (b *block) programOver(noun, name string, required bool, columns map[string]expr.Kind, want expr.Kind) *expr.Program {
 	a := b.take(name, required)
 	if a == nil {
 		return nil
 	}
-	p, diags := expr.Compile(a.Expr, expr.Schema{Columns: columns, Constants: b.r.consts})
+	p, diags := expr.Compile(a.Expr, expr.Schema{Columns: columns, Constants: b.r.consts, Noun: noun})
 	b.r.failAll(diags)
 	if p != nil && want != 0 && p.Kind() != want {
 		b.r.fail(a.Expr.Range(), p.Kind().String(), "expected %s", want)

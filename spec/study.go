@@ -228,13 +228,22 @@ const (
 	Refuse = "refuse"
 )
 
-// Guard is a condition on each fit of a curve, with a consequence.
+// What a guard stands on, for Guard.Kind.
+const (
+	OnCurve    = "curve"
+	OnContrast = "contrast"
+	OnInput    = "input"
+	OnStudy    = "study"
+)
+
+// Guard is a condition on each fit of a curve, on each pair of a contrast, on
+// an input or on the study as a whole, with a consequence.
 type Guard struct {
 	Name      Name
-	On        string        // a curve, a contrast, an input, or OnStudy
-	Require   *expr.Program // Bool, over FitColumns and the by columns
-	BeforeFit bool          // on a curve: Require uses only n, distinct and by columns
-	Readings  bool          // on a curve: Require uses readings
+	On        string // a curve, a contrast, an input; "study" for the study as a whole
+	Kind      string // of On: OnCurve, OnContrast, OnInput, OnStudy
+	Require   *expr.Program
+	BeforeFit bool // OnCurve: Require uses only n, distinct and by columns
 	Otherwise string
 	Reason    string
 	Source    string // Require as written
@@ -253,12 +262,13 @@ const (
 
 // Export is a table written to a file.
 type Export struct {
-	Name   Name
-	Of     string // a curve; for grid also a contrast
-	What   string
-	File   string
-	Schema bool // a Table Schema beside the file
-	Range  hcl.Range
+	Name      Name
+	Of        string // a curve; for grid also a contrast
+	What      string
+	File      string
+	Schema    bool // a Table Schema beside the file
+	Range     hcl.Range
+	SafeCells bool // text that a spreadsheet would take for a formula gets an apostrophe; true by default
 }
 
 // SchemaFile is the path of the Table Schema beside the export, "" where none

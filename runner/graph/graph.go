@@ -54,11 +54,18 @@ func Of(s *spec.Study) *Graph {
 		}
 		g.Nodes = append(g.Nodes, Node{c.Name.Text, "curve", note + "; " + c.Rule.Name, []string{c.From}})
 	}
-	for _, q := range s.Guards {
-		g.Nodes = append(g.Nodes, Node{q.Name.Text, "guard", q.Source + ", otherwise " + q.Otherwise, []string{q.On}})
-	}
 	for _, c := range s.Contrasts {
 		g.Nodes = append(g.Nodes, Node{c.Name.Text, "contrast", c.Minus[0] + " minus " + c.Minus[1], []string{c.Of}})
+	}
+	for _, q := range s.Guards {
+		on := []string{q.On}
+		if q.Kind == spec.OnStudy {
+			on = nil
+			for _, c := range s.Curves {
+				on = append(on, c.Name.Text)
+			}
+		}
+		g.Nodes = append(g.Nodes, Node{q.Name.Text, "guard", q.Source + ", otherwise " + q.Otherwise, on})
 	}
 	for _, e := range s.Exports {
 		g.Nodes = append(g.Nodes, Node{e.Name.Text, "export", e.What + " to " + e.File, []string{e.Of}})

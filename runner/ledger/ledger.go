@@ -8,6 +8,7 @@
 package ledger
 
 import (
+	"batten/runner/store"
 	"bytes"
 	"encoding/csv"
 	"encoding/json"
@@ -122,6 +123,9 @@ func (e *CorruptError) Error() string {
 
 // ReadState reads study.json; nil where nothing has been accepted.
 func ReadState(dir string) (*State, error) {
+	if fi, err := os.Lstat(dir); err == nil && fi.Mode()&fs.ModeSymlink != 0 {
+		return nil, &store.LinkError{Dir: dir}
+	}
 	path := filepath.Join(dir, "study.json")
 	b, err := os.ReadFile(path)
 	if errors.Is(err, fs.ErrNotExist) {

@@ -41,6 +41,14 @@ func (e *NewerError) Error() string {
 		e.Dir, e.Found, e.Own)
 }
 
+// LinkError says that a folder of the study's own is a link: what is written to
+// it would land elsewhere.
+type LinkError struct{ Dir string }
+
+func (e *LinkError) Error() string {
+	return fmt.Sprintf("%s is a link; expected a folder of the study's own, or nothing yet: remove the link", e.Dir)
+}
+
 // UnwritableError says that the store cannot be written to.
 type UnwritableError struct {
 	Dir string
@@ -64,6 +72,9 @@ func cause(err error) error {
 // Open opens the store in dir for reading. It writes nothing: what is not
 // there is a miss, and only a newer store is an error.
 func Open(dir string) (*Store, error) {
+	if fi, err := os.Lstat(dir); err == nil && fi.Mode()&os.ModeSymlink != 0 {
+		return nil, &LinkError{dir}
+	}
 	s := &Store{dir: dir}
 	_, err := s.format()
 	return s, err

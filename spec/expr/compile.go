@@ -17,6 +17,7 @@ import (
 type Schema struct {
 	Columns   map[string]Kind
 	Constants map[string]cty.Value // `let` names: numbers, text, truth values
+	Noun      string               // what the columns are called in messages; "" is column
 }
 
 // Program is a compiled expression. It may be run by many goroutines.
@@ -207,7 +208,11 @@ func (c *compiler) name(e *hclsyntax.ScopeTraversalExpr) (node, bool) {
 	for n := range c.schema.Constants {
 		all = append(all, n)
 	}
-	return c.fail(e.SrcRange, fmt.Sprintf("unknown column %q", name), "expected one of %s%s", list(all), Suggest(name, all))
+	noun := c.schema.Noun
+	if noun == "" {
+		noun = "column"
+	}
+	return c.fail(e.SrcRange, fmt.Sprintf("unknown %s %q", noun, name), "expected one of %s%s", list(all), Suggest(name, all))
 }
 
 func (c *compiler) unary(e *hclsyntax.UnaryOpExpr, depth int) (node, bool) {

@@ -38,7 +38,7 @@ guard "enough" {
 guard "all" {
   on        = study
   require   = fits > 3
-  otherwise = skip # want: skip on something that is no curve
+  otherwise = skip # want: skip for a guard on the study
 }
 export "grid" {
   of   = ageing

@@ -30,7 +30,7 @@ curve "ageing" {
 }
 guard "enough" {
   on        = ageing
-  require   = edff >= 8 # want: unknown column "edff" && did you mean "edf"
+  require   = edff >= 8 # want: unknown quantity "edff" && did you mean "edf"
   otherwise = skip
 }
 export "grid" {

@@ -111,7 +111,9 @@ func (e *env) printRun(c *cobra.Command, r *runner.Run) error {
 			Moved   []runner.Move   `json:"moved"`
 			Outputs []runner.Output `json:"outputs"`
 			Refused []string        `json:"refused,omitempty"`
-		}{r.Record.Run, r.Record.Counts, r.Record.Moved, r.Record.Outputs, r.Record.Refused})
+
+			Guards []runner.GuardRecord `json:"guards,omitempty"`
+		}{r.Record.Run, r.Record.Counts, r.Record.Moved, r.Record.Outputs, r.Record.Refused, r.Record.Guards})
 	}
 	if e.quiet {
 		return nil

@@ -405,3 +405,24 @@ func TestReadOnlyStudy(t *testing.T) {
 		t.Error("the outputs changed")
 	}
 }
+
+// TestLinkedFolders: a study that brings its own .batten or ledger as a link to
+// somewhere else does not get anything written there.
+func TestLinkedFolders(t *testing.T) {
+	for _, name := range []string{".batten", "ledger"} {
+		dir, other := slowStudy(t), t.TempDir()
+		if err := os.Symlink(other, filepath.Join(dir, name)); err != nil {
+			t.Skip(err)
+		}
+		out, status := ran("run", dir, "-q")
+		if status == Done || !strings.Contains(out, "is a link") {
+			t.Errorf("%s: exit status %d: %s", name, status, out)
+		}
+		if out, status := ran("accept", dir, "--reason", "x"); status == Done || !strings.Contains(out, "batten") {
+			t.Errorf("%s: accept: exit status %d: %s", name, status, out)
+		}
+		if left, _ := os.ReadDir(other); len(left) > 0 {
+			t.Errorf("%s: %d files were written through the link", name, len(left))
+		}
+	}
+}

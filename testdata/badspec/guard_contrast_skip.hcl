@@ -1,0 +1,46 @@
+study {
+  title = "Lamps (invented)"
+}
+let { limit = 70 }
+input "lamps" {
+  file    = "lamps.csv"
+  columns = {
+    batch  = text
+    hours  = number("h")
+    output = number("%")
+    made   = date
+    weight = number
+  }
+}
+rows "good" {
+  from = lamps
+  add "log_output" { value = log(output) }
+  drop "dead" {
+    when   = output <= 0
+    reason = "a dead lamp gives no output"
+  }
+}
+curve "ageing" {
+  from     = good
+  response = output
+  along    = hours
+  by       = [batch]
+  smoothness { rule = gcv }
+  reading "half" { crosses = limit }
+}
+contrast "gap" {
+  of     = ageing
+  across = batch
+  minus  = ["a", "b"]
+}
+guard "enough" {
+  on        = gap
+  require   = p_none < 0.5
+  otherwise = skip # want: skip for a guard on a contrast && only the fits of a curve can be skipped
+}
+export "grid" {
+  of   = ageing
+  what = grid
+  file = "out/grid.csv"
+}
+report "page" { files = ["out/page.html"] }
